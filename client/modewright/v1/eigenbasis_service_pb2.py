@@ -22,17 +22,22 @@ _runtime_version.ValidateProtobufRuntimeVersion(
 _sym_db = _symbol_database.Default()
 
 
+from modewright.v1 import couple_pb2 as modewright_dot_v1_dot_couple__pb2
+from modewright.v1 import dynamics_pb2 as modewright_dot_v1_dot_dynamics__pb2
+from modewright.v1 import operators_pb2 as modewright_dot_v1_dot_operators__pb2
+from modewright.v1 import sensitivity_pb2 as modewright_dot_v1_dot_sensitivity__pb2
 from modewright.v1 import solve_pb2 as modewright_dot_v1_dot_solve__pb2
+from modewright.v1 import sweep_pb2 as modewright_dot_v1_dot_sweep__pb2
 from modewright.v1 import transforms_pb2 as modewright_dot_v1_dot_transforms__pb2
 
 
-DESCRIPTOR = _descriptor_pool.Default().AddSerializedFile(b'\n&modewright/v1/eigenbasis_service.proto\x12\rmodewright.v1\x1a\x19modewright/v1/solve.proto\x1a\x1emodewright/v1/transforms.proto2\xe5\x03\n\x11\x45igenbasisService\x12\x42\n\x05\x43heck\x12\x1b.modewright.v1.CheckRequest\x1a\x1c.modewright.v1.CheckResponse\x12\x42\n\x05Solve\x12\x1b.modewright.v1.SolveRequest\x1a\x1c.modewright.v1.SolveResponse\x12S\n\nWatchSolve\x12 .modewright.v1.WatchSolveRequest\x1a!.modewright.v1.WatchSolveResponse0\x01\x12S\n\nFetchBasis\x12 .modewright.v1.FetchBasisRequest\x1a!.modewright.v1.FetchBasisResponse0\x01\x12H\n\x07Project\x12\x1d.modewright.v1.ProjectRequest\x1a\x1e.modewright.v1.ProjectResponse\x12T\n\x0bReconstruct\x12!.modewright.v1.ReconstructRequest\x1a\".modewright.v1.ReconstructResponseb\x06proto3')
+DESCRIPTOR = _descriptor_pool.Default().AddSerializedFile(b'\n&modewright/v1/eigenbasis_service.proto\x12\rmodewright.v1\x1a\x1amodewright/v1/couple.proto\x1a\x1cmodewright/v1/dynamics.proto\x1a\x1dmodewright/v1/operators.proto\x1a\x1fmodewright/v1/sensitivity.proto\x1a\x19modewright/v1/solve.proto\x1a\x19modewright/v1/sweep.proto\x1a\x1emodewright/v1/transforms.proto2\x8e\t\n\x11\x45igenbasisService\x12\x42\n\x05\x43heck\x12\x1b.modewright.v1.CheckRequest\x1a\x1c.modewright.v1.CheckResponse\x12\x42\n\x05Solve\x12\x1b.modewright.v1.SolveRequest\x1a\x1c.modewright.v1.SolveResponse\x12S\n\nWatchSolve\x12 .modewright.v1.WatchSolveRequest\x1a!.modewright.v1.WatchSolveResponse0\x01\x12S\n\nFetchBasis\x12 .modewright.v1.FetchBasisRequest\x1a!.modewright.v1.FetchBasisResponse0\x01\x12H\n\x07Project\x12\x1d.modewright.v1.ProjectRequest\x1a\x1e.modewright.v1.ProjectResponse\x12T\n\x0bReconstruct\x12!.modewright.v1.ReconstructRequest\x1a\".modewright.v1.ReconstructResponse\x12^\n\rProjectStream\x12#.modewright.v1.ProjectStreamRequest\x1a$.modewright.v1.ProjectStreamResponse(\x01\x30\x01\x12j\n\x11ReconstructStream\x12\'.modewright.v1.ReconstructStreamRequest\x1a(.modewright.v1.ReconstructStreamResponse(\x01\x30\x01\x12\\\n\rFetchOperator\x12#.modewright.v1.FetchOperatorRequest\x1a$.modewright.v1.FetchOperatorResponse0\x01\x12H\n\x07\x41\x64vance\x12\x1d.modewright.v1.AdvanceRequest\x1a\x1e.modewright.v1.AdvanceResponse\x12H\n\x07Respond\x12\x1d.modewright.v1.RespondRequest\x1a\x1e.modewright.v1.RespondResponse\x12\x45\n\x06\x43ouple\x12\x1c.modewright.v1.CoupleRequest\x1a\x1d.modewright.v1.CoupleResponse\x12\x46\n\x05Sweep\x12\x1b.modewright.v1.SweepRequest\x1a\x1c.modewright.v1.SweepResponse(\x01\x30\x01\x12Z\n\rDifferentiate\x12#.modewright.v1.DifferentiateRequest\x1a$.modewright.v1.DifferentiateResponseb\x06proto3')
 
 _globals = globals()
 _builder.BuildMessageAndEnumDescriptors(DESCRIPTOR, _globals)
 _builder.BuildTopDescriptorsAndMessages(DESCRIPTOR, 'modewright.v1.eigenbasis_service_pb2', _globals)
 if not _descriptor._USE_C_DESCRIPTORS:
   DESCRIPTOR._loaded_options = None
-  _globals['_EIGENBASISSERVICE']._serialized_start=117
-  _globals['_EIGENBASISSERVICE']._serialized_end=602
+  _globals['_EIGENBASISSERVICE']._serialized_start=266
+  _globals['_EIGENBASISSERVICE']._serialized_end=1432
 # @@protoc_insertion_point(module_scope)

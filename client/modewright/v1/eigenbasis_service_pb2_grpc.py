@@ -3,7 +3,12 @@
 import grpc
 import warnings
 
+from modewright.v1 import couple_pb2 as modewright_dot_v1_dot_couple__pb2
+from modewright.v1 import dynamics_pb2 as modewright_dot_v1_dot_dynamics__pb2
+from modewright.v1 import operators_pb2 as modewright_dot_v1_dot_operators__pb2
+from modewright.v1 import sensitivity_pb2 as modewright_dot_v1_dot_sensitivity__pb2
 from modewright.v1 import solve_pb2 as modewright_dot_v1_dot_solve__pb2
+from modewright.v1 import sweep_pb2 as modewright_dot_v1_dot_sweep__pb2
 from modewright.v1 import transforms_pb2 as modewright_dot_v1_dot_transforms__pb2
 
 GRPC_GENERATED_VERSION = '1.72.2'
@@ -73,6 +78,46 @@ class EigenbasisServiceStub(object):
                 request_serializer=modewright_dot_v1_dot_transforms__pb2.ReconstructRequest.SerializeToString,
                 response_deserializer=modewright_dot_v1_dot_transforms__pb2.ReconstructResponse.FromString,
                 _registered_method=True)
+        self.ProjectStream = channel.stream_stream(
+                '/modewright.v1.EigenbasisService/ProjectStream',
+                request_serializer=modewright_dot_v1_dot_operators__pb2.ProjectStreamRequest.SerializeToString,
+                response_deserializer=modewright_dot_v1_dot_operators__pb2.ProjectStreamResponse.FromString,
+                _registered_method=True)
+        self.ReconstructStream = channel.stream_stream(
+                '/modewright.v1.EigenbasisService/ReconstructStream',
+                request_serializer=modewright_dot_v1_dot_operators__pb2.ReconstructStreamRequest.SerializeToString,
+                response_deserializer=modewright_dot_v1_dot_operators__pb2.ReconstructStreamResponse.FromString,
+                _registered_method=True)
+        self.FetchOperator = channel.unary_stream(
+                '/modewright.v1.EigenbasisService/FetchOperator',
+                request_serializer=modewright_dot_v1_dot_operators__pb2.FetchOperatorRequest.SerializeToString,
+                response_deserializer=modewright_dot_v1_dot_operators__pb2.FetchOperatorResponse.FromString,
+                _registered_method=True)
+        self.Advance = channel.unary_unary(
+                '/modewright.v1.EigenbasisService/Advance',
+                request_serializer=modewright_dot_v1_dot_dynamics__pb2.AdvanceRequest.SerializeToString,
+                response_deserializer=modewright_dot_v1_dot_dynamics__pb2.AdvanceResponse.FromString,
+                _registered_method=True)
+        self.Respond = channel.unary_unary(
+                '/modewright.v1.EigenbasisService/Respond',
+                request_serializer=modewright_dot_v1_dot_dynamics__pb2.RespondRequest.SerializeToString,
+                response_deserializer=modewright_dot_v1_dot_dynamics__pb2.RespondResponse.FromString,
+                _registered_method=True)
+        self.Couple = channel.unary_unary(
+                '/modewright.v1.EigenbasisService/Couple',
+                request_serializer=modewright_dot_v1_dot_couple__pb2.CoupleRequest.SerializeToString,
+                response_deserializer=modewright_dot_v1_dot_couple__pb2.CoupleResponse.FromString,
+                _registered_method=True)
+        self.Sweep = channel.stream_stream(
+                '/modewright.v1.EigenbasisService/Sweep',
+                request_serializer=modewright_dot_v1_dot_sweep__pb2.SweepRequest.SerializeToString,
+                response_deserializer=modewright_dot_v1_dot_sweep__pb2.SweepResponse.FromString,
+                _registered_method=True)
+        self.Differentiate = channel.unary_unary(
+                '/modewright.v1.EigenbasisService/Differentiate',
+                request_serializer=modewright_dot_v1_dot_sensitivity__pb2.DifferentiateRequest.SerializeToString,
+                response_deserializer=modewright_dot_v1_dot_sensitivity__pb2.DifferentiateResponse.FromString,
+                _registered_method=True)
 
 
 class EigenbasisServiceServicer(object):
@@ -136,6 +181,69 @@ class EigenbasisServiceServicer(object):
         context.set_details('Method not implemented!')
         raise NotImplementedError('Method not implemented!')
 
+    def ProjectStream(self, request_iterator, context):
+        """Draft. Project for long batches: a header, then numbered chunks, each answered as it is done and
+        each independent of the others. Fails as Project does; answers already received stay good.
+        """
+        context.set_code(grpc.StatusCode.UNIMPLEMENTED)
+        context.set_details('Method not implemented!')
+        raise NotImplementedError('Method not implemented!')
+
+    def ReconstructStream(self, request_iterator, context):
+        """Draft. Reconstruct for long batches. Fails as ProjectStream does.
+        """
+        context.set_code(grpc.StatusCode.UNIMPLEMENTED)
+        context.set_details('Method not implemented!')
+        raise NotImplementedError('Method not implemented!')
+
+    def FetchOperator(self, request, context):
+        """Draft. Sends the matrix of a projection or a reconstruction in parts. Fails as FetchBasis does,
+        and as Project does for the mesh.
+        """
+        context.set_code(grpc.StatusCode.UNIMPLEMENTED)
+        context.set_details('Method not implemented!')
+        raise NotImplementedError('Method not implemented!')
+
+    def Advance(self, request, context):
+        """Draft. Coefficients at later times. Fails as Project does, and with INVALID_ARGUMENT for times
+        that are negative or not finite.
+        """
+        context.set_code(grpc.StatusCode.UNIMPLEMENTED)
+        context.set_details('Method not implemented!')
+        raise NotImplementedError('Method not implemented!')
+
+    def Respond(self, request, context):
+        """Draft. The field that answers sources and end data. Fails as Project does, and with
+        FAILED_PRECONDITION (RESONANCE) near an eigenvalue that the forcing excites.
+        """
+        context.set_code(grpc.StatusCode.UNIMPLEMENTED)
+        context.set_details('Method not implemented!')
+        raise NotImplementedError('Method not implemented!')
+
+    def Couple(self, request, context):
+        """Draft. Integrals of pairs of modes. Fails as Project does, and with INVALID_ARGUMENT if the two
+        domains have no common part.
+        """
+        context.set_code(grpc.StatusCode.UNIMPLEMENTED)
+        context.set_details('Method not implemented!')
+        raise NotImplementedError('Method not implemented!')
+
+    def Sweep(self, request_iterator, context):
+        """Draft. Solves many problems, each answered as it is done. An item's failure is its answer; the
+        stream itself fails only with RESOURCE_EXHAUSTED, DEADLINE_EXCEEDED, CANCELLED or UNAVAILABLE.
+        """
+        context.set_code(grpc.StatusCode.UNIMPLEMENTED)
+        context.set_details('Method not implemented!')
+        raise NotImplementedError('Method not implemented!')
+
+    def Differentiate(self, request, context):
+        """Draft. Derivatives of eigenvalues. Fails as Project does, and with INVALID_ARGUMENT for a
+        parameter that the problem does not have.
+        """
+        context.set_code(grpc.StatusCode.UNIMPLEMENTED)
+        context.set_details('Method not implemented!')
+        raise NotImplementedError('Method not implemented!')
+
 
 def add_EigenbasisServiceServicer_to_server(servicer, server):
     rpc_method_handlers = {
@@ -168,6 +276,46 @@ def add_EigenbasisServiceServicer_to_server(servicer, server):
                     servicer.Reconstruct,
                     request_deserializer=modewright_dot_v1_dot_transforms__pb2.ReconstructRequest.FromString,
                     response_serializer=modewright_dot_v1_dot_transforms__pb2.ReconstructResponse.SerializeToString,
+            ),
+            'ProjectStream': grpc.stream_stream_rpc_method_handler(
+                    servicer.ProjectStream,
+                    request_deserializer=modewright_dot_v1_dot_operators__pb2.ProjectStreamRequest.FromString,
+                    response_serializer=modewright_dot_v1_dot_operators__pb2.ProjectStreamResponse.SerializeToString,
+            ),
+            'ReconstructStream': grpc.stream_stream_rpc_method_handler(
+                    servicer.ReconstructStream,
+                    request_deserializer=modewright_dot_v1_dot_operators__pb2.ReconstructStreamRequest.FromString,
+                    response_serializer=modewright_dot_v1_dot_operators__pb2.ReconstructStreamResponse.SerializeToString,
+            ),
+            'FetchOperator': grpc.unary_stream_rpc_method_handler(
+                    servicer.FetchOperator,
+                    request_deserializer=modewright_dot_v1_dot_operators__pb2.FetchOperatorRequest.FromString,
+                    response_serializer=modewright_dot_v1_dot_operators__pb2.FetchOperatorResponse.SerializeToString,
+            ),
+            'Advance': grpc.unary_unary_rpc_method_handler(
+                    servicer.Advance,
+                    request_deserializer=modewright_dot_v1_dot_dynamics__pb2.AdvanceRequest.FromString,
+                    response_serializer=modewright_dot_v1_dot_dynamics__pb2.AdvanceResponse.SerializeToString,
+            ),
+            'Respond': grpc.unary_unary_rpc_method_handler(
+                    servicer.Respond,
+                    request_deserializer=modewright_dot_v1_dot_dynamics__pb2.RespondRequest.FromString,
+                    response_serializer=modewright_dot_v1_dot_dynamics__pb2.RespondResponse.SerializeToString,
+            ),
+            'Couple': grpc.unary_unary_rpc_method_handler(
+                    servicer.Couple,
+                    request_deserializer=modewright_dot_v1_dot_couple__pb2.CoupleRequest.FromString,
+                    response_serializer=modewright_dot_v1_dot_couple__pb2.CoupleResponse.SerializeToString,
+            ),
+            'Sweep': grpc.stream_stream_rpc_method_handler(
+                    servicer.Sweep,
+                    request_deserializer=modewright_dot_v1_dot_sweep__pb2.SweepRequest.FromString,
+                    response_serializer=modewright_dot_v1_dot_sweep__pb2.SweepResponse.SerializeToString,
+            ),
+            'Differentiate': grpc.unary_unary_rpc_method_handler(
+                    servicer.Differentiate,
+                    request_deserializer=modewright_dot_v1_dot_sensitivity__pb2.DifferentiateRequest.FromString,
+                    response_serializer=modewright_dot_v1_dot_sensitivity__pb2.DifferentiateResponse.SerializeToString,
             ),
     }
     generic_handler = grpc.method_handlers_generic_handler(
@@ -340,6 +488,222 @@ class EigenbasisService(object):
             '/modewright.v1.EigenbasisService/Reconstruct',
             modewright_dot_v1_dot_transforms__pb2.ReconstructRequest.SerializeToString,
             modewright_dot_v1_dot_transforms__pb2.ReconstructResponse.FromString,
+            options,
+            channel_credentials,
+            insecure,
+            call_credentials,
+            compression,
+            wait_for_ready,
+            timeout,
+            metadata,
+            _registered_method=True)
+
+    @staticmethod
+    def ProjectStream(request_iterator,
+            target,
+            options=(),
+            channel_credentials=None,
+            call_credentials=None,
+            insecure=False,
+            compression=None,
+            wait_for_ready=None,
+            timeout=None,
+            metadata=None):
+        return grpc.experimental.stream_stream(
+            request_iterator,
+            target,
+            '/modewright.v1.EigenbasisService/ProjectStream',
+            modewright_dot_v1_dot_operators__pb2.ProjectStreamRequest.SerializeToString,
+            modewright_dot_v1_dot_operators__pb2.ProjectStreamResponse.FromString,
+            options,
+            channel_credentials,
+            insecure,
+            call_credentials,
+            compression,
+            wait_for_ready,
+            timeout,
+            metadata,
+            _registered_method=True)
+
+    @staticmethod
+    def ReconstructStream(request_iterator,
+            target,
+            options=(),
+            channel_credentials=None,
+            call_credentials=None,
+            insecure=False,
+            compression=None,
+            wait_for_ready=None,
+            timeout=None,
+            metadata=None):
+        return grpc.experimental.stream_stream(
+            request_iterator,
+            target,
+            '/modewright.v1.EigenbasisService/ReconstructStream',
+            modewright_dot_v1_dot_operators__pb2.ReconstructStreamRequest.SerializeToString,
+            modewright_dot_v1_dot_operators__pb2.ReconstructStreamResponse.FromString,
+            options,
+            channel_credentials,
+            insecure,
+            call_credentials,
+            compression,
+            wait_for_ready,
+            timeout,
+            metadata,
+            _registered_method=True)
+
+    @staticmethod
+    def FetchOperator(request,
+            target,
+            options=(),
+            channel_credentials=None,
+            call_credentials=None,
+            insecure=False,
+            compression=None,
+            wait_for_ready=None,
+            timeout=None,
+            metadata=None):
+        return grpc.experimental.unary_stream(
+            request,
+            target,
+            '/modewright.v1.EigenbasisService/FetchOperator',
+            modewright_dot_v1_dot_operators__pb2.FetchOperatorRequest.SerializeToString,
+            modewright_dot_v1_dot_operators__pb2.FetchOperatorResponse.FromString,
+            options,
+            channel_credentials,
+            insecure,
+            call_credentials,
+            compression,
+            wait_for_ready,
+            timeout,
+            metadata,
+            _registered_method=True)
+
+    @staticmethod
+    def Advance(request,
+            target,
+            options=(),
+            channel_credentials=None,
+            call_credentials=None,
+            insecure=False,
+            compression=None,
+            wait_for_ready=None,
+            timeout=None,
+            metadata=None):
+        return grpc.experimental.unary_unary(
+            request,
+            target,
+            '/modewright.v1.EigenbasisService/Advance',
+            modewright_dot_v1_dot_dynamics__pb2.AdvanceRequest.SerializeToString,
+            modewright_dot_v1_dot_dynamics__pb2.AdvanceResponse.FromString,
+            options,
+            channel_credentials,
+            insecure,
+            call_credentials,
+            compression,
+            wait_for_ready,
+            timeout,
+            metadata,
+            _registered_method=True)
+
+    @staticmethod
+    def Respond(request,
+            target,
+            options=(),
+            channel_credentials=None,
+            call_credentials=None,
+            insecure=False,
+            compression=None,
+            wait_for_ready=None,
+            timeout=None,
+            metadata=None):
+        return grpc.experimental.unary_unary(
+            request,
+            target,
+            '/modewright.v1.EigenbasisService/Respond',
+            modewright_dot_v1_dot_dynamics__pb2.RespondRequest.SerializeToString,
+            modewright_dot_v1_dot_dynamics__pb2.RespondResponse.FromString,
+            options,
+            channel_credentials,
+            insecure,
+            call_credentials,
+            compression,
+            wait_for_ready,
+            timeout,
+            metadata,
+            _registered_method=True)
+
+    @staticmethod
+    def Couple(request,
+            target,
+            options=(),
+            channel_credentials=None,
+            call_credentials=None,
+            insecure=False,
+            compression=None,
+            wait_for_ready=None,
+            timeout=None,
+            metadata=None):
+        return grpc.experimental.unary_unary(
+            request,
+            target,
+            '/modewright.v1.EigenbasisService/Couple',
+            modewright_dot_v1_dot_couple__pb2.CoupleRequest.SerializeToString,
+            modewright_dot_v1_dot_couple__pb2.CoupleResponse.FromString,
+            options,
+            channel_credentials,
+            insecure,
+            call_credentials,
+            compression,
+            wait_for_ready,
+            timeout,
+            metadata,
+            _registered_method=True)
+
+    @staticmethod
+    def Sweep(request_iterator,
+            target,
+            options=(),
+            channel_credentials=None,
+            call_credentials=None,
+            insecure=False,
+            compression=None,
+            wait_for_ready=None,
+            timeout=None,
+            metadata=None):
+        return grpc.experimental.stream_stream(
+            request_iterator,
+            target,
+            '/modewright.v1.EigenbasisService/Sweep',
+            modewright_dot_v1_dot_sweep__pb2.SweepRequest.SerializeToString,
+            modewright_dot_v1_dot_sweep__pb2.SweepResponse.FromString,
+            options,
+            channel_credentials,
+            insecure,
+            call_credentials,
+            compression,
+            wait_for_ready,
+            timeout,
+            metadata,
+            _registered_method=True)
+
+    @staticmethod
+    def Differentiate(request,
+            target,
+            options=(),
+            channel_credentials=None,
+            call_credentials=None,
+            insecure=False,
+            compression=None,
+            wait_for_ready=None,
+            timeout=None,
+            metadata=None):
+        return grpc.experimental.unary_unary(
+            request,
+            target,
+            '/modewright.v1.EigenbasisService/Differentiate',
+            modewright_dot_v1_dot_sensitivity__pb2.DifferentiateRequest.SerializeToString,
+            modewright_dot_v1_dot_sensitivity__pb2.DifferentiateResponse.FromString,
             options,
             channel_credentials,
             insecure,

@@ -5,7 +5,12 @@ from typing import Any
 import grpc
 import grpc.aio
 
+from modewright.v1 import couple_pb2 as _couple_pb2
+from modewright.v1 import dynamics_pb2 as _dynamics_pb2
+from modewright.v1 import operators_pb2 as _operators_pb2
+from modewright.v1 import sensitivity_pb2 as _sensitivity_pb2
 from modewright.v1 import solve_pb2 as _solve_pb2
+from modewright.v1 import sweep_pb2 as _sweep_pb2
 from modewright.v1 import transforms_pb2 as _transforms_pb2
 
 class _Context(grpc.ServicerContext, grpc.aio.ServicerContext[Any, Any]):  # type: ignore[misc]
@@ -19,6 +24,14 @@ class EigenbasisServiceStub:
     FetchBasis: grpc.UnaryStreamMultiCallable[_solve_pb2.FetchBasisRequest, _solve_pb2.FetchBasisResponse]
     Project: grpc.UnaryUnaryMultiCallable[_transforms_pb2.ProjectRequest, _transforms_pb2.ProjectResponse]
     Reconstruct: grpc.UnaryUnaryMultiCallable[_transforms_pb2.ReconstructRequest, _transforms_pb2.ReconstructResponse]
+    ProjectStream: grpc.StreamStreamMultiCallable[_operators_pb2.ProjectStreamRequest, _operators_pb2.ProjectStreamResponse]
+    ReconstructStream: grpc.StreamStreamMultiCallable[_operators_pb2.ReconstructStreamRequest, _operators_pb2.ReconstructStreamResponse]
+    FetchOperator: grpc.UnaryStreamMultiCallable[_operators_pb2.FetchOperatorRequest, _operators_pb2.FetchOperatorResponse]
+    Advance: grpc.UnaryUnaryMultiCallable[_dynamics_pb2.AdvanceRequest, _dynamics_pb2.AdvanceResponse]
+    Respond: grpc.UnaryUnaryMultiCallable[_dynamics_pb2.RespondRequest, _dynamics_pb2.RespondResponse]
+    Couple: grpc.UnaryUnaryMultiCallable[_couple_pb2.CoupleRequest, _couple_pb2.CoupleResponse]
+    Sweep: grpc.StreamStreamMultiCallable[_sweep_pb2.SweepRequest, _sweep_pb2.SweepResponse]
+    Differentiate: grpc.UnaryUnaryMultiCallable[_sensitivity_pb2.DifferentiateRequest, _sensitivity_pb2.DifferentiateResponse]
 
 class EigenbasisServiceAsyncStub:
     def __init__(self, channel: grpc.aio.Channel) -> None: ...
@@ -28,6 +41,14 @@ class EigenbasisServiceAsyncStub:
     FetchBasis: grpc.aio.UnaryStreamMultiCallable[_solve_pb2.FetchBasisRequest, _solve_pb2.FetchBasisResponse]
     Project: grpc.aio.UnaryUnaryMultiCallable[_transforms_pb2.ProjectRequest, _transforms_pb2.ProjectResponse]
     Reconstruct: grpc.aio.UnaryUnaryMultiCallable[_transforms_pb2.ReconstructRequest, _transforms_pb2.ReconstructResponse]
+    ProjectStream: grpc.aio.StreamStreamMultiCallable[_operators_pb2.ProjectStreamRequest, _operators_pb2.ProjectStreamResponse]
+    ReconstructStream: grpc.aio.StreamStreamMultiCallable[_operators_pb2.ReconstructStreamRequest, _operators_pb2.ReconstructStreamResponse]
+    FetchOperator: grpc.aio.UnaryStreamMultiCallable[_operators_pb2.FetchOperatorRequest, _operators_pb2.FetchOperatorResponse]
+    Advance: grpc.aio.UnaryUnaryMultiCallable[_dynamics_pb2.AdvanceRequest, _dynamics_pb2.AdvanceResponse]
+    Respond: grpc.aio.UnaryUnaryMultiCallable[_dynamics_pb2.RespondRequest, _dynamics_pb2.RespondResponse]
+    Couple: grpc.aio.UnaryUnaryMultiCallable[_couple_pb2.CoupleRequest, _couple_pb2.CoupleResponse]
+    Sweep: grpc.aio.StreamStreamMultiCallable[_sweep_pb2.SweepRequest, _sweep_pb2.SweepResponse]
+    Differentiate: grpc.aio.UnaryUnaryMultiCallable[_sensitivity_pb2.DifferentiateRequest, _sensitivity_pb2.DifferentiateResponse]
 
 class EigenbasisServiceServicer:
     def Check(self, request: _solve_pb2.CheckRequest, context: _Context) -> _solve_pb2.CheckResponse | Awaitable[_solve_pb2.CheckResponse]: ...
@@ -36,6 +57,14 @@ class EigenbasisServiceServicer:
     def FetchBasis(self, request: _solve_pb2.FetchBasisRequest, context: _Context) -> Iterator[_solve_pb2.FetchBasisResponse] | AsyncIterator[_solve_pb2.FetchBasisResponse]: ...
     def Project(self, request: _transforms_pb2.ProjectRequest, context: _Context) -> _transforms_pb2.ProjectResponse | Awaitable[_transforms_pb2.ProjectResponse]: ...
     def Reconstruct(self, request: _transforms_pb2.ReconstructRequest, context: _Context) -> _transforms_pb2.ReconstructResponse | Awaitable[_transforms_pb2.ReconstructResponse]: ...
+    def ProjectStream(self, request_iterator: AsyncIterator[_operators_pb2.ProjectStreamRequest], context: _Context) -> Iterator[_operators_pb2.ProjectStreamResponse] | AsyncIterator[_operators_pb2.ProjectStreamResponse]: ...
+    def ReconstructStream(self, request_iterator: AsyncIterator[_operators_pb2.ReconstructStreamRequest], context: _Context) -> Iterator[_operators_pb2.ReconstructStreamResponse] | AsyncIterator[_operators_pb2.ReconstructStreamResponse]: ...
+    def FetchOperator(self, request: _operators_pb2.FetchOperatorRequest, context: _Context) -> Iterator[_operators_pb2.FetchOperatorResponse] | AsyncIterator[_operators_pb2.FetchOperatorResponse]: ...
+    def Advance(self, request: _dynamics_pb2.AdvanceRequest, context: _Context) -> _dynamics_pb2.AdvanceResponse | Awaitable[_dynamics_pb2.AdvanceResponse]: ...
+    def Respond(self, request: _dynamics_pb2.RespondRequest, context: _Context) -> _dynamics_pb2.RespondResponse | Awaitable[_dynamics_pb2.RespondResponse]: ...
+    def Couple(self, request: _couple_pb2.CoupleRequest, context: _Context) -> _couple_pb2.CoupleResponse | Awaitable[_couple_pb2.CoupleResponse]: ...
+    def Sweep(self, request_iterator: AsyncIterator[_sweep_pb2.SweepRequest], context: _Context) -> Iterator[_sweep_pb2.SweepResponse] | AsyncIterator[_sweep_pb2.SweepResponse]: ...
+    def Differentiate(self, request: _sensitivity_pb2.DifferentiateRequest, context: _Context) -> _sensitivity_pb2.DifferentiateResponse | Awaitable[_sensitivity_pb2.DifferentiateResponse]: ...
 
 def add_EigenbasisServiceServicer_to_server(
     servicer: EigenbasisServiceServicer, server: grpc.Server | grpc.aio.Server
