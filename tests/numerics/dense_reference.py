@@ -1,14 +1,15 @@
 """A dense solver for layered problems that shares nothing with the product but the equation.
 
 Galerkin in Legendre polynomials (bubbles are integrated Legendre polynomials; Szabo and Babuska, Finite
-Element Analysis, 1991, chapter 2), coefficients called as Python functions at Gauss points, and one dense
-``scipy.linalg.eigh`` for the pencil turned upside down: ``M v = mu (K + s M) v``, ``lambda = 1/mu - s``.
-Turning it upside down makes the low eigenvalues the large ones of a bounded operator, which a backward stable
-driver gives to a few units of rounding; ``K v = lambda M v`` would lose the ratio of the largest to the lowest.
+Element Analysis, 1991, chapter 2), coefficients called as Python functions at Gauss points, and one
+dense ``scipy.linalg.eigh`` for the pencil turned upside down: ``M v = mu (K + s M) v``, ``lambda = 1/mu
+- s``. Turning it upside down makes the low eigenvalues the large ones of a bounded operator, which a
+backward stable driver gives to a few units of rounding; ``K v = lambda M v`` would lose the ratio of
+the largest to the lowest.
 
-Conventions are the product's: ``-(p u')' + q u = lambda w u``; a film of h at an end adds ``h u^2`` to the energy,
-a lump its mass to the norm, a contact resistance ``[u]^2 / R`` and a resistance before a lump
-``(v - u)^2 / R`` with the lump's own value v.
+Conventions are the product's: ``-(p u')' + q u = lambda w u``; a film of h at an end adds ``h u^2`` to
+the energy, a lump its mass to the norm, a contact resistance ``[u]^2 / R`` and a resistance before a
+lump ``(v - u)^2 / R`` with the lump's own value v.
 """
 
 from __future__ import annotations
@@ -49,7 +50,7 @@ class DenseEnd:
 
 @dataclass(frozen=True)
 class DenseJoint:
-    """Contact resistance, point spring and point mass at the inner edge x (the last two need resistance 0)."""
+    """Contact resistance, point spring and point mass at the inner edge x; the last two without the first."""
 
     x: float
     resistance: float = 0.0
@@ -112,8 +113,10 @@ def _shapes(t: NDArray[np.float64], degree: int) -> tuple[NDArray[np.float64], N
     return shapes, slopes
 
 
-def _number_unknowns(problem: DenseProblem, degree: int) -> tuple[NDArray[np.float64], NDArray[np.int64], list[int]]:
-    """Element edges, the unknown of every local function (elements, degree + 1), and the layer of each element."""
+def _number_unknowns(
+    problem: DenseProblem, degree: int
+) -> tuple[NDArray[np.float64], NDArray[np.int64], list[int]]:
+    """Element edges, the unknown of each local function (elements, degree + 1), each element's layer."""
     broken = {joint.x for joint in problem.joints if joint.resistance > 0.0}
     edges, layer_of = [problem.layers[0].start], []
     for i, layer in enumerate(problem.layers):
@@ -138,7 +141,9 @@ def _assemble(
     edges, unknown, layer_of = _number_unknowns(problem, degree)
     body = int(unknown.max()) + 1
     left_lump = body if problem.left.resistance > 0.0 else int(unknown[0, 0])
-    right_lump = body + (problem.left.resistance > 0.0) if problem.right.resistance > 0.0 else int(unknown[-1, 1])
+    right_lump = (
+        body + (problem.left.resistance > 0.0) if problem.right.resistance > 0.0 else int(unknown[-1, 1])
+    )
     size = max(body, left_lump + 1, right_lump + 1)
     stiffness, mass = np.zeros((size, size)), np.zeros((size, size))
     t, weights = legendre.leggauss(2 * degree + 12)
@@ -150,7 +155,10 @@ def _assemble(
         stiffness[here] += (slopes * (weights * _at(layer.p, x) / half)) @ slopes.T
         stiffness[here] += (shapes * (weights * half * _at(layer.q, x))) @ shapes.T
         mass[here] += (shapes * (weights * half * _at(layer.w, x))) @ shapes.T
-    for end, at, lump in ((problem.left, unknown[0, 0], left_lump), (problem.right, unknown[-1, 1], right_lump)):
+    for end, at, lump in (
+        (problem.left, unknown[0, 0], left_lump),
+        (problem.right, unknown[-1, 1], right_lump),
+    ):
         stiffness[lump, lump] += end.stiffness
         mass[lump, lump] += end.mass
         if end.resistance > 0.0:

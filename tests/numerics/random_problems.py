@@ -55,7 +55,11 @@ def random_document(seed: int, geometry: str = "plane") -> dict[str, Any]:
     for i in range(count):
         q: float | str = 0.0
         if rng.random() < 0.4:
-            q = float(rng.uniform(-5.0, 5.0)) if rng.random() < 0.5 else f"{float(rng.uniform(-8, 8))!r}*cos(3*x)"
+            q = (
+                float(rng.uniform(-5.0, 5.0))
+                if rng.random() < 0.5
+                else f"{float(rng.uniform(-8, 8))!r}*cos(3*x)"
+            )
         layers.append(
             {
                 "name": f"layer-{i}",

@@ -1,7 +1,8 @@
 """The dense solver itself, against the reference eigenvalues: it must earn its place as a judge.
 
-Sources: the records' own, see ``tests/reference/data``. Tolerance 5e-13 of s_n: some hundred units of rounding,
-what a dense driver leaves of a pencil turned upside down at a condition of about 25. The product takes no part here.
+Sources: the records' own, see ``tests/reference/data``. Tolerance 5e-13 of s_n: some hundred units of
+rounding, what a dense driver leaves of a pencil turned upside down at a condition of about 25. The
+product takes no part here.
 """
 
 from __future__ import annotations
@@ -14,8 +15,9 @@ from tests.numerics.random_problems import random_document
 from tests.reference.coverage import AHEAD, COVERED, record_of
 from tests.reference.functions import dense_from_document, dense_from_record
 
-# tanh-layer is 1e-3 wide: elements as short as its width lose digits to the contrast of stiffness. The triple wells
-# are 400 to 2500 high and their lowest eigenvalue is 1e-16: rounding of the coefficient alone is 1e-13.
+# tanh-layer is 1e-3 wide: elements as short as its width lose digits to the contrast of stiffness. The
+# triple wells are 400 to 2500 high and their lowest eigenvalue is 1e-16: rounding of the coefficient
+# alone is 1e-13.
 NAMES = tuple(name for name in (*COVERED, *AHEAD) if name != "tanh-layer" and not name.startswith("triple"))
 
 
@@ -36,4 +38,6 @@ def test_a_thinner_mesh_gives_the_same_values() -> None:
     size = np.maximum(np.abs(fine.eigenvalues), problem.scale())
     assert float(np.max(np.abs(coarse.eigenvalues - fine.eigenvalues) / size)) <= 5e-13
     x = np.linspace(problem.layers[0].start, problem.layers[-1].end, 41)[1:-1]
-    np.testing.assert_allclose(coarse.at(x), fine.at(x), rtol=0.0, atol=1e-9 * float(np.abs(fine.at(x)).max()))
+    np.testing.assert_allclose(
+        coarse.at(x), fine.at(x), rtol=0.0, atol=1e-9 * float(np.abs(fine.at(x)).max())
+    )

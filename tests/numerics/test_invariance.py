@@ -1,20 +1,22 @@
 """A change of units changes the scale of the answer and nothing else.
 
--(p u')' + q u = lambda w u with p, q, w, films, springs, masses and 1/R all multiplied by c has the same eigenvalues, and
-modes smaller by sqrt(c). With lengths multiplied by l (and q by 1/l^2, films and springs by 1/l, masses and R by l)
-the eigenvalues are divided by l^2 and the modes by sqrt(l). Both follow by substitution.
+-(p u')' + q u = lambda w u with p, q, w, films, springs, masses and 1/R all multiplied by c has the
+same eigenvalues, and modes smaller by sqrt(c). With lengths multiplied by l (and q by 1/l^2, films and
+springs by 1/l, masses and R by l) the eigenvalues are divided by l^2 and the modes by sqrt(l). Both
+follow by substitution.
 
-Tolerance 1e-11 of s_n: far below the tolerance asked for (1e-9), since the same mesh must be chosen whatever the
-units; above it by more than the rounding that the factors bring into the coefficients.
+Tolerance 1e-11 of s_n: far below the tolerance asked for (1e-9), since the same mesh must be chosen
+whatever the units; above it by more than the rounding that the factors bring into the coefficients.
 """
 
 from __future__ import annotations
 
 from typing import Any
 
-import modewright
 import numpy as np
 import pytest
+
+import modewright
 
 MODES = 24
 
@@ -39,7 +41,14 @@ def _document(factor: float, length: float) -> dict[str, Any]:
                 "q": f"{3.0 * c / l**2!r}*cos(4*x/{l!r})",
                 "w": c,
             },
-            {"name": "plain", "start": 1.0 * l, "end": 1.5 * l, "p": 0.05 * c, "q": 0.2 * c / l**2, "w": 0.4 * c},
+            {
+                "name": "plain",
+                "start": 1.0 * l,
+                "end": 1.5 * l,
+                "p": 0.05 * c,
+                "q": 0.2 * c / l**2,
+                "w": 0.4 * c,
+            },
         ],
         "left": {"kind": "lump", "mass": 0.6 * c * l, "film": 0.3 * c / l, "resistance": 0.2 * l / c},
         "right": {"kind": "film", "film": 1.5 * c / l},
@@ -53,7 +62,16 @@ def _solve(service: modewright.Service, factor: float, length: float) -> modewri
 
 @pytest.mark.parametrize(
     ("factor", "length"),
-    [(1e12, 1.0), (1e-12, 1.0), (1.0, 1e6), (1.0, 1e-6), (1e12, 1e-6), (1e-12, 1e6), (1e12, 1e6), (1e-12, 1e-6)],
+    [
+        (1e12, 1.0),
+        (1e-12, 1.0),
+        (1.0, 1e6),
+        (1.0, 1e-6),
+        (1e12, 1e-6),
+        (1e-12, 1e6),
+        (1e12, 1e6),
+        (1e-12, 1e-6),
+    ],
 )
 def test_units(factor: float, length: float, service: modewright.Service) -> None:
     plain, scaled = _solve(service, 1.0, 1.0), _solve(service, factor, length)

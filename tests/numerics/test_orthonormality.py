@@ -8,9 +8,9 @@ from __future__ import annotations
 
 from typing import Any
 
-import modewright
 import pytest
 
+import modewright
 from tests.numerics.random_problems import random_document
 from tests.reference.functions import dense_from_document
 from tests.reference.own_checks import orthonormality_defect
@@ -19,7 +19,9 @@ MODES = 100
 FIXED, FREE = {"kind": "dirichlet"}, {"kind": "neumann"}
 
 
-def _uniform(count: int, left: dict[str, Any], right: dict[str, Any], **materials: list[float]) -> dict[str, Any]:
+def _uniform(
+    count: int, left: dict[str, Any], right: dict[str, Any], **materials: list[float]
+) -> dict[str, Any]:
     """Equally thick layers on (0, 1); ``materials`` gives the values of p or w to repeat."""
     layers = []
     for i in range(count):

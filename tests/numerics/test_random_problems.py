@@ -1,28 +1,29 @@
 """Random layered problems, all kinds of ends and joints, against the dense solver of the tests.
 
-The dense solver is judged by the reference records in ``test_dense_reference.py``; its own error is taken as
-1e-11 of s_n here, since conductivities and capacities span three decades. The promise at rtol 1e-12 is an error of
-1e-11 of s_n. Modes are compared too: their error is of the order of the square root of the eigenvalue's in
-energy and smaller in value, magnified by s_n over the distance to the next eigenvalue.
+The dense solver is judged by the reference records in ``test_dense_reference.py``; on these problems
+two of its meshes agree to 2e-14 of s_n, and 1e-13 is granted for its error. The promise at rtol 1e-12
+is an error of 1e-11 of s_n. Modes are compared too: their error is of the order of the square root of
+the eigenvalue's in energy and smaller in value, magnified by s_n over the distance to the next
+eigenvalue.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable
 
-import modewright
 import numpy as np
 import pytest
-from modewright.record import Record
 from numpy.typing import NDArray
 
+import modewright
+from modewright.record import Record
 from tests.numerics.dense_reference import DenseModes, DenseProblem, solve_dense
 from tests.numerics.random_problems import random_document
 from tests.reference.functions import dense_from_document
 from tests.reference.own_checks import count_zeros, element_values, orthonormality_defect
 
 MODES = 12
-DENSE_ERROR = 1e-11
+DENSE_ERROR = 1e-13
 CASES = [("plane", seed) for seed in range(20)]
 CASES += [(geometry, seed) for geometry in ("cylindrical", "spherical") for seed in range(40, 46)]
 

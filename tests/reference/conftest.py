@@ -2,9 +2,9 @@ from __future__ import annotations
 
 from collections.abc import Callable
 
-import modewright
 import pytest
 
+import modewright
 from tests.reference.load import problem_from_record, records
 
 

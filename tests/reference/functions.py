@@ -1,7 +1,7 @@
 """The coefficients of the reference records as NumPy functions, and as a dense problem.
 
-Used only to check the product against quadrature and a dense solver; the expressions come from the project's own
-data files.
+Used only to check the product against quadrature and a dense solver; the expressions come from the
+project's own data files.
 """
 
 from __future__ import annotations
@@ -55,11 +55,13 @@ def _joint(interface: dict[str, float], power: int) -> DenseJoint:
     )
 
 
-def dense_from_document(document: dict[str, Any], pieces: int = 2, cuts: tuple[float, ...] = ()) -> DenseProblem:
+def dense_from_document(
+    document: dict[str, Any], pieces: int = 2, cuts: tuple[float, ...] = ()
+) -> DenseProblem:
     """The same problem for the dense solver; ``cuts`` refine it where a coefficient is steep.
 
-    In cylindrical and spherical geometry everything per area is multiplied by the area, r or r^2, at its place:
-    -(r^g p u')' + r^g q u = lambda r^g w u.
+    In cylindrical and spherical geometry everything per area is multiplied by the area, r or r^2, at
+    its place: -(r^g p u')' + r^g q u = lambda r^g w u.
     """
     power = ("plane", "cylindrical", "spherical").index(document.get("geometry", "plane"))
 

@@ -1,10 +1,10 @@
 """Reads the reference records in ``data/`` and turns them into problems of the client.
 
-A record states a problem in the conventions of ``data/CONVENTIONS.txt``: at every end
-``A u + B p u' = 0`` with ``p u'`` along +x, or ``A u + B p u' = lambda G u`` (``lambda-robin``); ``friedrichs``
-is the principal solution at a singular end, called *bounded* here. The sign of ``B`` tells the physical
-condition: a spring or film of stiffness h is ``A = h, B = -1`` at the left end and ``A = h, B = +1`` at the right
-one, so ``lambda-robin`` is a lump of mass ``G / |B|`` with a film ``A / |B|`` to the outside.
+A record states a problem in the conventions of ``data/CONVENTIONS.txt``: at every end ``A u + B p u' =
+0`` with ``p u'`` along +x, or ``A u + B p u' = lambda G u`` (``lambda-robin``); ``friedrichs`` is the
+principal solution at a singular end, called *bounded* here. The sign of ``B`` tells the physical
+condition: a spring or film of stiffness h is ``A = h, B = -1`` at the left end and ``A = h, B = +1`` at
+the right one, so ``lambda-robin`` is a lump of mass ``G / |B|`` with a film ``A / |B|`` to the outside.
 
 This module imports nothing of the tests, so that it can be loaded by its path.
 """
@@ -122,7 +122,8 @@ def document_from_record(record: dict[str, Any]) -> dict[str, Any]:
 
 
 def problem_from_record(record: dict[str, Any]) -> modewright.Problem:
-    """The problem of one record (fields ``domain``, ``layers``, ``left``, ``right``, ``interfaces``, ``coupled``).
+    """The problem of one record (fields ``domain``, ``layers``, ``left``, ``right``, ``interfaces``,
+    ``coupled``).
 
     Raises:
         ValueError: if the layers do not cover the domain, or a field is none of the conventions'.

@@ -1,7 +1,8 @@
 """Zero counts, norms and scales by the tests' own methods, from the arrays of a record.
 
-Nothing here calls the product: Legendre series are summed by NumPy's ``legval``, integrals are composite Gauss
-rules (Davis and Rabinowitz, Methods of Numerical Integration, 2nd ed. 1984, section 2.7).
+Nothing here calls the product: Legendre series are summed by NumPy's ``legval``, integrals are
+composite Gauss rules (Davis and Rabinowitz, Methods of Numerical Integration, 2nd ed. 1984, section
+2.7).
 """
 
 from __future__ import annotations
@@ -9,9 +10,10 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 
 import numpy as np
-from modewright.record import Record
 from numpy.polynomial import legendre
 from numpy.typing import NDArray
+
+from modewright.record import Record
 
 # Below this share of its largest value a mode is rounding noise: behind a barrier it decays past 1e-16.
 _NOISE = 1e-11
@@ -28,8 +30,9 @@ def element_values(record: Record, e: int, t: NDArray[np.float64]) -> NDArray[np
 def count_zeros(record: Record) -> NDArray[np.int64]:
     """(modes,): changes of sign along the domain, of the values at dense interior points of every element.
 
-    A solution has a bounded number of zeros an element (its degree), and Chebyshev points several times denser
-    separate them; values that are noise are left out, so a change across a resistance counts as one.
+    A solution has a bounded number of zeros an element (its degree), and Chebyshev points several times
+    denser separate them; values that are noise are left out, so a change across a resistance counts as
+    one.
     """
     last = np.zeros(record.count)
     changes = np.zeros(record.count, dtype=np.int64)

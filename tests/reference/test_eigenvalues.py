@@ -1,8 +1,8 @@
 """The reference eigenvalues, index by index, against the answers of the real service.
 
-Sources: the ``source`` field of each record in ``data/reference_problems.json``; values confirmed there by two
-routes to at least 30 digits. Errors are relative to ``s_n = max(|lambda_n|, Lambda)``,
-``Lambda = (pi / integral of sqrt(w/p))^2``, with the integral by the tests' own Gauss rule.
+Sources: the ``source`` field of each record in ``data/reference_problems.json``; values confirmed there
+by two routes to at least 30 digits. Errors are relative to ``s_n = max(|lambda_n|, Lambda)``, ``Lambda
+= (pi / integral of sqrt(w/p))^2``, with the integral by the tests' own Gauss rule.
 
 The tolerances are the promises: at the default tolerance an error and a width of at most 1e-9 s_n, at rtol
 1e-12 an error of at most 1e-11 s_n, and the true value between the bounds always. Containment is judged in
@@ -15,10 +15,10 @@ from collections.abc import Callable, Iterator
 from decimal import Decimal
 from typing import Any
 
-import modewright
 import numpy as np
 import pytest
 
+import modewright
 from tests.reference.coverage import AHEAD, COVERED, UNCOVERED, highest_low_index, record_of
 from tests.reference.functions import dense_from_record
 from tests.reference.load import problem_from_record, records

@@ -1,9 +1,10 @@
 """Closed-form expansion coefficients of ``data/expansions.json`` against the service's projections.
 
-Each record gives a function, a problem, the normalised eigenfunction and the coefficients, confirmed there by
-45-digit quadrature. The functions are polynomials of degree two at most, so a cubic spline through point values and
-the spline of their cumulative integrals through cell averages reproduce them exactly: the same coefficients must
-come back from an expression, from point values and from cell averages on a non-uniform mesh.
+Each record gives a function, a problem, the normalised eigenfunction and the coefficients, confirmed
+there by 45-digit quadrature. The functions are polynomials of degree two at most, so a cubic spline
+through point values and the spline of their cumulative integrals through cell averages reproduce them
+exactly: the same coefficients must come back from an expression, from point values and from cell
+averages on a non-uniform mesh.
 
 Tolerance, as promised: 1e-10 of the largest coefficient.
 """
@@ -12,11 +13,11 @@ from __future__ import annotations
 
 from typing import Any
 
-import modewright
 import numpy as np
 import pytest
 from numpy.typing import NDArray
 
+import modewright
 from tests.reference.functions import as_function
 from tests.reference.load import expansions, problem_from_record
 

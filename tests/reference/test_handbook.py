@@ -1,18 +1,18 @@
 """Figures printed in handbooks, against the service's answers.
 
-The tables of ``data/handbook_tables.json`` were written down from memory of the books named in their ``citation``
-and recomputed there to 28 digits. Each figure is checked twice: rounded to the printed decimals against the
-printed value, and to 1e-9 against the recomputed one.
+The tables of ``data/handbook_tables.json`` were written down from memory of the books named in their
+``citation`` and recomputed there to 28 digits. Each figure is checked twice: rounded to the printed
+decimals against the printed value, and to 1e-9 against the recomputed one.
 """
 
 from __future__ import annotations
 
 from typing import Any
 
-import modewright
 import numpy as np
 import pytest
 
+import modewright
 from tests.reference.load import handbook_tables
 
 _TABLES = {table["quantity"]: table for table in handbook_tables()}

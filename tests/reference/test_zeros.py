@@ -1,20 +1,20 @@
 """Index and zeros: mode n of a problem with separated ends has n interior zeros.
 
-Source: Sturm's oscillation theorem (Zettl, Sturm-Liouville Theory, 2005, theorem 4.3.1); a change of sign across a
-contact resistance counts as one. The zeros are counted from the returned pieces by the tests' own method, and the
-count the service reports is compared as well. With a mass at an end the theorem still holds: the n-th mode has n
-zeros in the interior, the lump's value being that of the end (Fulton, Proc. R. Soc. Edinburgh 77A (1977) 293-308,
-for the right end in the eigenvalue parameter).
+Source: Sturm's oscillation theorem (Zettl, Sturm-Liouville Theory, 2005, theorem 4.3.1); a change of
+sign across a contact resistance counts as one. The zeros are counted from the returned pieces by the
+tests' own method, and the count the service reports is compared as well. With a mass at an end the
+theorem still holds: the n-th mode has n zeros in the interior, the lump's value being that of the end
+(Fulton, Proc. R. Soc. Edinburgh 77A (1977) 293-308, for the right end in the eigenvalue parameter).
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable
 
-import modewright
 import numpy as np
 import pytest
 
+import modewright
 from tests.reference.coverage import AHEAD, COVERED, highest_low_index
 from tests.reference.own_checks import count_zeros
 
