@@ -1,0 +1,233 @@
+"""A lower and an upper bound for every eigenvalue.
+
+Upper: the discrete eigenvalues are Rayleigh-Ritz values. Lower: the theorem of Lehmann and Goerisch (Goerisch
+and Haunhorst, Z. angew. Math. Mech. 65, 1985, 129-135) with the rebuilt fluxes of :mod:`.modes`. For Ritz
+values rho_i = lambda_i + s of a positive form, the Gram matrix G_ij = int d_i d_j / p of their flux defects and
+a number nu <= lambda_m + s above rho_{m-1}, the block i..m-1 gives
+
+    lambda_i + s >= nu / (1 + z),  z the largest eigenvalue of
+    diag((nu - rho) / rho) + nu^2 G_ij / (theta rho_i rho_j sqrt((nu - rho_i)(nu - rho_j))).
+
+nu comes from exact counts of the comparison problem (:mod:`.comparison`). Where the form without a part theta
+of int p u'^2 is still non-negative, only that part carries the defect: theta = 1 for q >= 0 and dissipative
+ends, else 0.8 with s raised until it holds. Added to both bounds: the effect of replacing p, q, w by
+polynomials, and rounding. The bounds are computed in floating point, not with interval arithmetic.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from modewright_service.core.approximation import CoefficientMesh
+from modewright_service.core.comparison import Comparison, build_comparison
+from modewright_service.core.modes import FluxDefect
+from modewright_service.core.problem import Resolved
+
+__all__ = ["Bounds", "bound", "coefficient_terms"]
+
+Array = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+_EPS = float(np.finfo(float).eps)
+# Largest block; more members sharpen the bound only inside clusters.
+_BLOCK = 6
+# Where in the gap between two Ritz values nu is tried.
+_FRACTIONS = (0.3, 0.6, 0.9)
+# Pieces of the comparison problem: the first try and the most.
+_FIRST_PIECES = 64
+_MOST_PIECES = 24_000
+# Share of int p u'^2 that carries the defect where the rest of the form could be negative.
+_PART = 0.8
+
+
+@dataclass(frozen=True, eq=False)
+class Bounds:
+    """lower, upper, defect, rounding: (N,); confirmed: (N,) whether nu came from the comparison's exact count.
+
+    defect: the discretisation's share of the width. rounding: rounding's and the coefficients' share.
+    """
+
+    lower: Array
+    upper: Array
+    confirmed: NDArray[np.bool_]
+    defect: Array
+    rounding: Array
+
+
+def coefficient_terms(mesh: CoefficientMesh, lam: Array) -> Array:
+    """(T,) how far lambda may move when p, q, w are replaced by their polynomials on `mesh`.
+
+    With relative errors d_p, d_w and q off by d_q: |change| <= (d_p + d_w) |lambda| + 2 max(d_q / w), to first
+    order in errors that are near rounding; d_p acts on the p-energy, bounded by |lambda| + max(-q/w).
+    """
+    p_error, w_error = float(np.max(mesh.p_error)), float(np.max(mesh.w_error))
+    mean_w = np.maximum(mesh.w[:, 0], np.finfo(float).tiny)
+    q_term = float(np.max(mesh.q_error / mean_w))
+    lowest_q = mesh.q[:, 0] - np.abs(mesh.q[:, 1:]).sum(axis=1)
+    depth = float(np.max(np.maximum(-lowest_q, 0.0) / mean_w))
+    return (p_error + w_error) * (np.abs(lam) + depth) * (1.0 + p_error + w_error) + 2.0 * q_term
+
+
+def bound(
+    lam: Array,
+    count: int,
+    defect: FluxDefect,
+    mesh: CoefficientMesh,
+    resolved: Resolved,
+    degree: int,
+    scale: float,
+    poll: Callable[[], None],
+) -> Bounds:
+    """Bounds of the first `count` of T > count Ritz values `lam`.
+
+    scale: Lambda. degree: of the elements (rounding grows with it).
+    """
+    extra = coefficient_terms(mesh, lam)
+    index = np.arange(lam.size)
+    rounding = 10.0 * 0.5 * _EPS * ((degree + index) * defect.energy + degree * scale)
+    shift, part = _shift(lam, mesh, resolved, scale)
+    nu = _thresholds(lam, count, mesh, resolved, scale, poll)
+    if shift is None:
+        lower = np.full(count, -np.inf)
+        size = np.zeros(count)
+    else:
+        lower, size = _lehmann_goerisch(lam, count, defect.scaled, nu, shift, part)
+    # the comparison alone: the largest nu whose count does not exceed the index
+    plain = _plain(nu, count)
+    margin = rounding[:count] + extra[:count]
+    confirmed = np.isfinite(lower)
+    lower = np.maximum(lower - margin, plain)
+    upper = lam[:count] + margin
+    lower = np.minimum(lower, lam[:count])
+    return Bounds(lower, upper, confirmed, size, margin)
+
+
+@dataclass(frozen=True, eq=False)
+class _Thresholds:
+    """nu: ascending trial numbers; count: (K,) exact counts of the comparison problem below them."""
+
+    nu: Array
+    count: IntArray
+
+
+def _thresholds(
+    lam: Array, count: int, mesh: CoefficientMesh, resolved: Resolved, scale: float, poll: Callable[[], None]
+) -> _Thresholds:
+    """Counts at trial points inside the gaps, the comparison refined until the gaps above count are met."""
+    gaps = np.diff(lam)
+    trials = (lam[:-1, None] + gaps[:, None] * np.array(_FRACTIONS)).ravel()
+    below = lam[0] - (scale + abs(lam[0])) * np.array([1e6, 1e3, 30.0, 4.0, 1.0, 0.25, 0.05])
+    trials = np.sort(np.concatenate([below, trials]))
+    wanted = np.searchsorted(lam, trials, side="left")
+    counted = np.full(trials.size, np.iinfo(np.int64).max)
+    pieces = _FIRST_PIECES
+    while True:
+        cuts = _cuts(mesh, pieces)
+        comparison = build_comparison(mesh, resolved, cuts)
+        open_trials = np.flatnonzero(counted > wanted)
+        counted[open_trials] = np.minimum(counted[open_trials], comparison.count(trials[open_trials]))
+        poll()
+        # an index is served when some gap above it, at most a block away, is met
+        gap_met = np.zeros(lam.size + _BLOCK, dtype=bool)
+        gap_met[wanted[counted <= wanted]] = True
+        windows = np.lib.stride_tricks.sliding_window_view(gap_met[1:], _BLOCK)
+        if windows[:count].any(axis=1).all() or 4 * cuts.sum() > _MOST_PIECES:
+            return _Thresholds(trials, counted)
+        pieces = 4 * int(cuts.sum())
+
+
+def _cuts(mesh: CoefficientMesh, pieces: int) -> IntArray:
+    """Pieces per element in proportion to how much p, q, w vary on it; 1 where all are constant."""
+    lengths = np.diff(mesh.edges)
+
+    def variation(c: Array) -> Array:
+        spread = np.abs(c[:, 1:]).sum(axis=1)
+        return spread / np.maximum(np.abs(c[:, 0]), np.finfo(float).tiny)
+
+    q_scale = np.maximum(np.abs(mesh.q).sum(axis=1).max(), np.finfo(float).tiny)
+    q_share = np.abs(mesh.q[:, 1:]).sum(axis=1) / q_scale
+    varies = variation(mesh.p) + variation(mesh.w) + q_share
+    varies = np.where(varies > 1e-13, varies, 0.0)
+    total = varies.sum()
+    if total == 0.0:
+        return np.ones(lengths.size, dtype=np.int64)
+    share: IntArray = np.ceil(pieces * varies / total).astype(np.int64)
+    return np.maximum(share, 1)
+
+
+def _plain(thresholds: _Thresholds, count: int) -> Array:
+    result = np.full(count, -np.inf)
+    for n in range(count):
+        usable = thresholds.nu[thresholds.count <= n]
+        if usable.size:
+            result[n] = usable[-1]
+    return result
+
+
+def _shift(lam: Array, mesh: CoefficientMesh, resolved: Resolved, scale: float) -> tuple[float | None, float]:
+    """s and theta with (form - theta int p u'^2 + s M) >= 0; s is None where none was found."""
+    lowest_q = mesh.q[:, 0] - np.abs(mesh.q[:, 1:]).sum(axis=1)
+    passive = float(lowest_q.min()) >= 0.0
+    passive &= resolved.left.stiffness >= 0.0 and resolved.right.stiffness >= 0.0
+    passive &= all(joint.spring >= 0.0 for joint in resolved.joints)
+    if passive:
+        return (0.0 if lam[0] > 0.05 * scale else scale), 1.0
+    comparison: Comparison = build_comparison(mesh, resolved, _cuts(mesh, 512))
+    start = max(scale, -float(lam[0]))
+    trials = start * np.concatenate([[0.0], 2.0 ** np.arange(-6, 40, 0.25)])
+    counts = comparison.count(-trials, fraction=1.0 - _PART)
+    fine = np.flatnonzero(counts == 0)
+    # also lambda_0 + s must stay clear of zero
+    fine = fine[trials[fine] + lam[0] >= 0.05 * scale] if fine.size else fine
+    return (float(trials[fine[0]]) if fine.size else None), _PART
+
+
+def _lehmann_goerisch(
+    lam: Array, count: int, scaled: Array, thresholds: _Thresholds, shift: float, part: float
+) -> tuple[Array, Array]:
+    """(lower bounds, the distance Ritz value - bound before rounding), -inf where no nu serves."""
+    best = np.full(count, -np.inf)
+    wanted = np.searchsorted(lam, thresholds.nu, side="left")
+    met = thresholds.count <= wanted
+    nu_of = np.full(lam.size + 1, np.nan)
+    # trials ascend, so the last one written in each gap is the largest that was met
+    nu_of[wanted[met]] = thresholds.nu[met]
+    rho = lam + shift
+    offsets = [
+        np.einsum("tg,tg->t", scaled[: lam.size - o], scaled[o:]) if o < lam.size else np.zeros(0)
+        for o in range(_BLOCK)
+    ]
+    for size in range(1, _BLOCK + 1):
+        first = np.arange(min(count, lam.size - size))
+        if first.size == 0:
+            continue
+        nu = nu_of[first + size] + shift
+        usable = np.isfinite(nu) & (rho[first] > 0.0)
+        first, nu = first[usable], nu[usable]
+        if first.size == 0:
+            continue
+        members = first[:, None] + np.arange(size)
+        r = rho[members]
+        gap = nu[:, None] - r
+        block = np.zeros((first.size, size, size))
+        for i in range(size):
+            for j in range(i, size):
+                gram = offsets[j - i][first + i]
+                root = np.sqrt(gap[:, i] * gap[:, j])
+                value = nu**2 * gram / (part * r[:, i] * r[:, j] * root)
+                block[:, i, j] += value
+                if i != j:
+                    block[:, j, i] += value
+        # z - (nu - rho_i)/rho_i as the largest eigenvalue of the shifted block keeps small defects visible
+        base = gap[:, 0] / r[:, 0]
+        for i in range(size):
+            block[:, i, i] += gap[:, i] / r[:, i] - base
+        rise = np.maximum(np.linalg.eigvalsh(block)[:, -1], 0.0)
+        # rho_0 - nu/(1 + base + rise) with 1 + base = nu / rho_0
+        value = lam[first] - r[:, 0] * rise / (nu / r[:, 0] + rise)
+        best[first] = np.maximum(best[first], value)
+    return best, np.where(np.isfinite(best), lam[:count] - best, np.inf)

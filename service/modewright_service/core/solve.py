@@ -1,0 +1,263 @@
+"""Solve: from a problem to the record of its lowest eigenpairs.
+
+Coefficients become polynomials on a mesh (:mod:`.approximation`), the mesh is refined until the highest lambda
+is resolved in every layer (:mod:`.mesh`), elements are decomposed once (:mod:`.elements`), eigenvalues counted
+and found on the condensed chain (:mod:`.condensed`, :mod:`.spectrum`), modes and flux defects built
+(:mod:`.modes`), bounds computed (:mod:`.bounds`). Where a bound's width is the discretisation's fault, the
+elements with the largest defects are halved and the step repeated.
+"""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from modewright.record import EndInfo, Record
+from modewright_service.core.approximation import CoefficientMesh, approximate
+from modewright_service.core.bounds import Bounds, bound
+from modewright_service.core.condensed import Chain, build_chain, count_below, eigenvectors
+from modewright_service.core.digest import ALGORITHM_VERSION, basis_key, problem_digest
+from modewright_service.core.elements import build_elements
+from modewright_service.core.errors import NotConverged, Reason, SpectrumExhausted
+from modewright_service.core.mesh import bisect_elements, fundamental, refine_for, top_for_phase
+from modewright_service.core.modes import FluxDefect, Modes, flux_defects, interior_zeros, make_modes
+from modewright_service.core.problem import EndTerm, Problem, Resolved, resolve, validate
+from modewright_service.core.spectrum import floor_below, lowest
+
+__all__ = ["SolveOptions", "solve"]
+
+Array = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class SolveOptions:
+    """How the discretisation is chosen; the defaults serve every tolerance rung.
+
+    degree: of the polynomials on each element, at least 2.
+    phase: radians of the highest mode that an element may hold.
+    max_elements: refinement stops there. passes: halvings after the first solve.
+    """
+
+    degree: int = 32
+    phase: float = 20.0
+    max_elements: int = 20_000
+    passes: int = 8
+
+
+@dataclass(frozen=True, eq=False)
+class _Pass:
+    """What one mesh gave."""
+
+    mesh: CoefficientMesh
+    chain: Chain
+    values: Array
+    modes: Modes
+    defect: FluxDefect
+    bounds: Bounds
+
+
+def _nothing() -> None:
+    return None
+
+
+# The share of the tolerance that the discretisation may use up; rounding and coefficients have the rest.
+_SHARE = 0.1
+
+
+def solve(
+    problem: Problem,
+    count: int,
+    rtol: float,
+    *,
+    options: SolveOptions | None = None,
+    poll: Callable[[], None] = _nothing,
+) -> Record:
+    """The `count` lowest eigenpairs of `problem`, none missed, each with bounds.
+
+    rtol: width wanted for every pair of bounds, relative to max(|lambda|, Lambda); where rounding does not
+    allow it the bounds are as wide as they have to be. poll is called inside the loops and may raise.
+
+    Raises InvalidProblem, Unsupported, SpectrumExhausted, NotConverged, and whatever poll raises.
+    """
+    started = time.perf_counter()
+    chosen = options or SolveOptions()
+    validate(problem)
+    resolved = resolve(problem)
+    coefficients = approximate(problem, poll=poll)
+    scale = fundamental(coefficients)
+    if scale == 0.0:
+        raise SpectrumExhausted.at(
+            Reason.SPECTRUM_EXHAUSTED, "modes", "w is zero in every layer: only lumped masses carry lambda", str(count)
+        )
+    wanted = count + _spare(count)
+    mesh, top = coefficients, scale
+    result: _Pass | None = None
+    for attempt in range(chosen.passes + 1):
+        if result is None:
+            chain, top = _resolve_top(coefficients, resolved, wanted, scale, chosen, poll)
+        else:
+            marked = _marked(result, count, rtol, scale)
+            elements = result.mesh.edges.size - 1
+            if not marked.any() or elements + int(marked.sum()) > chosen.max_elements:
+                break
+            mesh = bisect_elements(result.mesh, marked)
+            chain = build_chain(build_elements(mesh, chosen.degree), resolved)
+            top = _top_of(chain, wanted, top)
+        poll()
+        result = _one_pass(chain, resolved, count, wanted, top, scale, chosen.degree, poll)
+        if attempt == chosen.passes:
+            break
+    assert result is not None
+    return _record(problem, resolved, result, count, rtol, scale, time.perf_counter() - started)
+
+
+def _spare(count: int) -> int:
+    """Modes beyond those wanted: the lower bounds need a gap above the last one that a comparison can meet."""
+    return 4 + count // 50
+
+
+def _resolve_top(
+    coefficients: CoefficientMesh,
+    resolved: Resolved,
+    wanted: int,
+    scale: float,
+    chosen: SolveOptions,
+    poll: Callable[[], None],
+) -> tuple[Chain, float]:
+    """A chain that resolves a lambda below which at least `wanted` eigenvalues lie, and that lambda."""
+    phase = (wanted + 1.0) * np.pi
+    # unknowns at least half as many again as modes, whatever the phase says
+    least = int(np.ceil(1.5 * (wanted + 2) / max(1, chosen.degree - 1)))
+    found = 0
+    for _ in range(60):
+        poll()
+        top = top_for_phase(coefficients, phase, scale)
+        low = min(-scale, top_for_phase(coefficients, 1e-6, scale))
+        mesh = refine_for(coefficients, low, top, chosen.phase, least, chosen.max_elements)
+        chain = build_chain(build_elements(mesh, chosen.degree), resolved)
+        found = int(count_below(chain, np.array([top]))[0])
+        if found >= wanted:
+            return chain, top
+        phase += (wanted - found + 0.5) * np.pi
+    raise NotConverged.at(
+        Reason.NOT_CONVERGED, "modes", f"only {found} eigenvalues were found within the mesh allowed", str(wanted)
+    )
+
+
+def _top_of(chain: Chain, wanted: int, top: float) -> float:
+    """`top`, raised a little where a finer mesh moved the last eigenvalue across it."""
+    for _ in range(60):
+        if int(count_below(chain, np.array([top]))[0]) >= wanted:
+            return top
+        top += 0.1 * abs(top) + np.finfo(float).tiny
+    raise NotConverged.at(Reason.NOT_CONVERGED, "modes", "the spectrum moved under refinement", str(wanted))
+
+
+def _one_pass(
+    chain: Chain,
+    resolved: Resolved,
+    count: int,
+    wanted: int,
+    top: float,
+    scale: float,
+    degree: int,
+    poll: Callable[[], None],
+) -> _Pass:
+    floor = floor_below(chain, scale)
+    values = lowest(chain, wanted, floor, top, scale, poll).values
+    _check_counts(chain, values)
+    poll()
+    modes = make_modes(chain, values, eigenvectors(chain, values))
+    poll()
+    defect = flux_defects(chain, values, modes)
+    mesh = chain.elements.mesh
+    bounds = bound(values, count, defect, mesh, resolved, degree, scale, poll)
+    return _Pass(mesh, chain, values, modes, defect, bounds)
+
+
+def _check_counts(chain: Chain, values: Array) -> None:
+    """One count between all neighbours that can be told apart: index n has exactly n eigenvalues below it."""
+    gaps = np.diff(values)
+    clear = np.flatnonzero(gaps > 1e-12 * (np.abs(values[1:]) + np.abs(values[:-1])))
+    if clear.size == 0:
+        return
+    counts = count_below(chain, 0.5 * (values[clear] + values[clear + 1]))
+    wrong = np.flatnonzero(counts != clear + 1)
+    if wrong.size:
+        n = int(clear[wrong[0]])
+        raise NotConverged.at(
+            Reason.NOT_CONVERGED, "modes", f"{int(counts[wrong[0]])} eigenvalues counted below index {n + 1}", str(n)
+        )
+
+
+def _marked(result: _Pass, count: int, rtol: float, scale: float) -> NDArray[np.bool_]:
+    """Elements whose flux defects keep some bound from the tolerance."""
+    size = np.maximum(np.abs(result.values[:count]), scale)
+    short = np.flatnonzero(result.bounds.defect > _SHARE * rtol * size)
+    shares = result.defect.by_element
+    marked = np.zeros(shares.shape[1], dtype=bool)
+    if short.size:
+        # a mode's worst elements, down to a tenth of the worst: the rest would not be seen
+        part = shares[short]
+        marked |= (part > 0.1 * part.max(axis=1, keepdims=True)).any(axis=0)
+    return marked
+
+
+def _record(
+    problem: Problem, resolved: Resolved, result: _Pass, count: int, rtol: float, scale: float, seconds: float
+) -> Record:
+    chain, modes, mesh, bounds = result.chain, result.modes, result.mesh, result.bounds
+    legendre = modes.legendre(chain.elements.reference.to_legendre)
+    zeros = interior_zeros(chain, modes, legendre)[:count]
+    digest = problem_digest(problem)
+    none = np.zeros(0)
+    apart = bounds.lower[1:] > bounds.upper[:-1]
+    return Record(
+        algorithm_version=ALGORITHM_VERSION,
+        problem_digest=digest,
+        basis_key=basis_key(digest, count, rtol),
+        rtol=rtol,
+        eigenvalues=result.values[:count],
+        lower=bounds.lower,
+        upper=bounds.upper,
+        zeros=zeros,
+        groups=np.concatenate([[0], np.cumsum(apart)]).astype(np.int64),
+        confirmed=bounds.confirmed.astype(np.uint8),
+        scale=scale,
+        geometry=problem.geometry.power,
+        layer_names=tuple(layer.name for layer in problem.layers),
+        edges=mesh.edges,
+        layer=mesh.layer.astype(np.int32),
+        degrees=np.full(mesh.edges.size - 1, chain.elements.reference.degree, dtype=np.int32),
+        coefficients=legendre[:count],
+        p=mesh.p,
+        q=mesh.q,
+        w=mesh.w,
+        left=_end_info(resolved.left),
+        right=_end_info(resolved.right),
+        left_lump=modes.nodes[0, :count] if _has_lump(resolved.left) else none,
+        right_lump=modes.nodes[-1, :count] if _has_lump(resolved.right) else none,
+        joints=np.array(
+            [[joint.x, joint.resistance, joint.spring, joint.mass] for joint in resolved.joints], dtype=np.float64
+        ).reshape(-1, 4),
+        solve_seconds=seconds,
+    )
+
+
+def _has_lump(end: EndTerm) -> bool:
+    return end.lump is not None or end.mass > 0.0
+
+
+def _end_info(end: EndTerm) -> EndInfo:
+    mass, film, resistance = end.lump or (end.mass, end.stiffness if end.mass > 0.0 else 0.0, 0.0)
+    return EndInfo(
+        kind=end.kind,
+        stiffness=0.0 if end.lump else end.stiffness,
+        mass=mass,
+        resistance=resistance,
+        film=film,
+    )

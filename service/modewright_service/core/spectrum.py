@@ -1,0 +1,102 @@
+"""The lowest eigenvalues of the condensed chain, found by counting so that none can be missed.
+
+Every index n keeps a bracket (low, high) with count(low) <= n < count(high). Brackets are cut by Newton steps
+of the twisted factorisation, accepted only while the bracket isolates one eigenvalue, else by bisection; all
+indices advance together. The brackets of the accepted values are checked in the end by one more count between
+neighbours.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from modewright_service.core.condensed import Chain, count_below, evaluate
+from modewright_service.core.errors import NotConverged, Reason
+
+__all__ = ["Spectrum", "floor_below", "lowest"]
+
+Array = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+_EPS = float(np.finfo(float).eps)
+# Bisection halves a bracket; 200 rounds pass from 1e30 to one unit of rounding with room for Newton's retries.
+_ROUNDS = 200
+
+
+@dataclass(frozen=True, eq=False)
+class Spectrum:
+    """values: (N,) ascending eigenvalues of the discrete problem. evaluations: chain evaluations spent."""
+
+    values: Array
+    evaluations: int
+
+
+def floor_below(chain: Chain, scale: float) -> float:
+    """A lambda below the whole discrete spectrum, not much further down than needed.
+
+    scale: a positive lambda of the size of the smallest eigenvalue gaps, the first trial.
+    """
+    trial = -1e-3 * scale
+    for _ in range(400):
+        if int(count_below(chain, np.array([trial]))[0]) == 0:
+            return trial
+        trial *= 2.0
+    raise NotConverged.at(Reason.NOT_CONVERGED, "modes", "no lower end of the spectrum was found", repr(trial))
+
+
+def lowest(chain: Chain, count: int, floor: float, top: float, scale: float, poll: Callable[[], None]) -> Spectrum:
+    """The `count` lowest eigenvalues, all of which lie in (floor, top).
+
+    scale: size of a typical low eigenvalue, for the stopping rule near lambda = 0.
+    Raises NotConverged where a bracket does not close (which a consistent count excludes).
+    """
+    parameters = np.linspace(0.0, 1.0, int(1.3 * count) + 3)
+    grid = floor + (top - floor) * parameters**2
+    counts = np.maximum.accumulate(count_below(chain, grid))
+    index = np.arange(count)
+    above = np.searchsorted(counts, index, side="right")
+    if int(counts[-1]) < count:
+        raise NotConverged.at(Reason.NOT_CONVERGED, "modes", f"{int(counts[-1])} found below the top", str(count))
+    above = np.maximum(above, 1)
+    low, high = grid[above - 1].copy(), grid[above].copy()
+    count_low, count_high = counts[above - 1].copy(), counts[above].copy()
+
+    value = 0.5 * (low + high)
+    active = np.ones(count, dtype=bool)
+    last_step = np.full(count, np.inf)
+    evaluations = 1
+    for _ in range(_ROUNDS):
+        if not active.any():
+            break
+        poll()
+        a = np.flatnonzero(active)
+        result = evaluate(chain, value[a])
+        evaluations += 1
+        is_below = result.count <= index[a]
+        low[a] = np.where(is_below, value[a], low[a])
+        count_low[a] = np.where(is_below, result.count, count_low[a])
+        high[a] = np.where(is_below, high[a], value[a])
+        count_high[a] = np.where(is_below, count_high[a], result.count)
+        width = high[a] - low[a]
+        step = np.abs(result.step)
+        rounding = 4.0 * _EPS * (np.abs(value[a]) + scale)
+        isolated = (count_high[a] - count_low[a] == 1) & (count_low[a] == index[a])
+        target = value[a] + result.step
+        # close to an eigenvalue its side is decided by rounding: a step this small may leave the bracket
+        slack = 1e3 * rounding
+        inside = (target >= low[a] - slack) & (target <= high[a] + slack)
+        shrinking = step <= 0.5 * last_step[a]
+        newton = isolated & inside & (shrinking | (step <= slack))
+        done = newton & ((step <= np.maximum(rounding, 1e-9 * width)) | ((step <= slack) & ~shrinking))
+        done |= width <= rounding
+        last_step[a] = np.where(newton, step, np.inf)
+        value[a] = np.where(newton, target, 0.5 * (low[a] + high[a]))
+        active[a[done]] = False
+    if active.any():
+        n = int(np.flatnonzero(active)[0])
+        raise NotConverged.at(Reason.NOT_CONVERGED, "modes", f"bracket of index {n} did not close", repr(value[n]))
+    return Spectrum(np.maximum.accumulate(value), evaluations)
