@@ -3,8 +3,13 @@
 from __future__ import annotations
 
 import os
+from collections.abc import Iterator
+from typing import TYPE_CHECKING
 
 import pytest
+
+if TYPE_CHECKING:
+    import modewright
 
 TIERS = ("core", "peers", "long")
 
@@ -20,3 +25,12 @@ def pytest_collection_modifyitems(items: list[pytest.Item]) -> None:
     for item in items:
         if not any(item.get_closest_marker(tier) for tier in TIERS):
             item.add_marker(pytest.mark.core)
+
+
+@pytest.fixture(scope="session")
+def service() -> Iterator[modewright.Service]:
+    """One embedded service for everything that only asks and changes nothing: it is started once."""
+    import modewright
+
+    with modewright.connect() as handle:
+        yield handle
