@@ -2,8 +2,8 @@
 
 Upper: the discrete eigenvalues are Rayleigh-Ritz values. Lower: the theorem of Lehmann and Goerisch (Goerisch
 and Haunhorst, Z. angew. Math. Mech. 65, 1985, 129-135) with the rebuilt fluxes of :mod:`.modes`. For Ritz
-values rho_i = lambda_i + s of a positive form, the Gram matrix G_ij = int d_i d_j / p of their flux defects and
-a number nu <= lambda_m + s above rho_{m-1}, the block i..m-1 gives
+values rho_i = lambda_i + s of a positive form, the Gram matrix G_ij = int d_i d_j / p of their flux defects
+and a number nu <= lambda_m + s above rho_{m-1}, the block i..m-1 gives
 
     lambda_i + s >= nu / (1 + z),  z the largest eigenvalue of
     diag((nu - rho) / rho) + nu^2 G_ij / (theta rho_i rho_j sqrt((nu - rho_i)(nu - rho_j))).
@@ -46,7 +46,8 @@ _PART = 0.8
 
 @dataclass(frozen=True, eq=False)
 class Bounds:
-    """lower, upper, defect, rounding: (N,); confirmed: (N,) whether nu came from the comparison's exact count.
+    """lower, upper, defect, rounding: (N,); confirmed: (N,) whether nu came from the comparison's exact
+    count.
 
     defect: the discretisation's share of the width. rounding: rounding's and the coefficients' share.
     """
@@ -61,8 +62,8 @@ class Bounds:
 def coefficient_terms(mesh: CoefficientMesh, lam: Array) -> Array:
     """(T,) how far lambda may move when p, q, w are replaced by their polynomials on `mesh`.
 
-    With relative errors d_p, d_w and q off by d_q: |change| <= (d_p + d_w) |lambda| + 2 max(d_q / w), to first
-    order in errors that are near rounding; d_p acts on the p-energy, bounded by |lambda| + max(-q/w).
+    With relative errors d_p, d_w and q off by d_q: |change| <= (d_p + d_w) |lambda| + 2 max(d_q / w), to
+    first order in errors that are near rounding; d_p acts on the p-energy, bounded by |lambda| + max(-q/w).
     """
     p_error, w_error = float(np.max(mesh.p_error)), float(np.max(mesh.w_error))
     mean_w = np.maximum(mesh.w[:, 0], np.finfo(float).tiny)

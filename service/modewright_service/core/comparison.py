@@ -1,8 +1,8 @@
 """Exact counts of a comparison problem whose eigenvalues lie below the true ones.
 
-On each of many short pieces p and q are replaced by lower bounds and w by the bound that makes -nu w smallest:
-the form K - nu M can only fall, and with it every eigenvalue (the min-max principle: Weinstein and Stenger,
-Methods of Intermediate Problems for Eigenvalues, 1972, ch. 1). With constant pieces the solution is
+On each of many short pieces p and q are replaced by lower bounds and w by the bound that makes -nu w
+smallest: the form K - nu M can only fall, and with it every eigenvalue (the min-max principle: Weinstein and
+Stenger, Methods of Intermediate Problems for Eigenvalues, 1972, ch. 1). With constant pieces the solution is
 trigonometric or hyperbolic and its zeros are counted exactly (Sturm's oscillation theorem), independent of
 every element of the discretisation:
 
@@ -31,8 +31,9 @@ IntArray = NDArray[np.int64]
 class Comparison:
     """Constant pieces, left to right.
 
-    length, p, q: (P,). w_lower, w_upper: (P,), used for nu < 0 and nu >= 0. resistance, spring, mass: (P,) point terms at the right end of each piece (the mass
-    and spring before the resistance). left, right: the ends.
+    length, p, q: (P,). w_lower, w_upper: (P,), used for nu < 0 and nu >= 0. resistance, spring, mass: (P,)
+    point terms at the right end of each piece (the mass and spring before the resistance). left, right: the
+    ends.
     """
 
     length: Array
@@ -65,7 +66,13 @@ def build_comparison(mesh: CoefficientMesh, resolved: Resolved, cuts: IntArray) 
         piece = int(np.argmin(np.abs(bounds.edges[1:] - joint.x)))
         resistance[piece], spring[piece], mass[piece] = joint.resistance, joint.spring, joint.mass
     return Comparison(
-        length, bounds.p_lower, bounds.q_lower, bounds.w_lower, bounds.w_upper, *(resistance, spring, mass), *(resolved.left, resolved.right)
+        length,
+        bounds.p_lower,
+        bounds.q_lower,
+        bounds.w_lower,
+        bounds.w_upper,
+        *(resistance, spring, mass),
+        *(resolved.left, resolved.right),
     )
 
 
@@ -119,7 +126,9 @@ def _positive(u: Array, v: Array, count: IntArray) -> tuple[Array, Array]:
 
 
 def _advance(u: Array, v: Array, h: float, p: float, load: Array, count: IntArray) -> tuple[Array, Array]:
-    """Over one piece of constant p and load = q - nu w; u >= 0 in and out, the larger of |u|, |v| h / p normalised to one."""
+    """Over one piece of constant p and load = q - nu w; u >= 0 in and out, the larger of |u|, |v| h / p
+    normalised to one.
+    """
     square = -load / p
     phase2 = square * (h * h)
     root = np.sqrt(np.abs(square))

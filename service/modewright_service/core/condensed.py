@@ -6,7 +6,8 @@ has a pole; so the bubble mode nearest to lambda stays an explicit unknown c of 
 
     [[g + alpha, -g, a1], [-g, g + gamma, a2], [a1, a2, delta]],  a = -l m_c,  delta = 1 - l theta_c,
 
-and (u_i, c_i) are eliminated together as a 2 x 2 pivot with determinant D = d delta - a1^2, d = x + g + alpha:
+and (u_i, c_i) are eliminated together as a 2 x 2 pivot with determinant D = d delta - a1^2, d = x + g +
+alpha:
 
     x' = gamma + { g [(x + alpha) delta - (a1 + a2)^2] - a2^2 (x + alpha) } / D,
 
@@ -29,7 +30,18 @@ from modewright_service.core.elements import Elements
 from modewright_service.core.errors import NotConverged, Reason
 from modewright_service.core.problem import Resolved
 
-__all__ = ["Chain", "Evaluation", "Vectors", "build_chain", "count_below", "eigenvectors", "evaluate"]
+__all__ = [
+    "Chain",
+    "Evaluation",
+    "Links",
+    "Vectors",
+    "build_chain",
+    "condense",
+    "count_below",
+    "eigenvectors",
+    "evaluate",
+    "sweep_left",
+]
 
 Array = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -45,7 +57,8 @@ class Chain:
     elements: the decomposed elements. element_of_link: (n,) element index or -1 for a resistance.
     conductance: (n,) 1/R of a resistance link, 0 elsewhere. stiffness, mass: (n+1,) point terms of the nodes.
     left_fixed, right_fixed: u = 0 at the first, last node.
-    left_node: first node that lies on the interval (1 where a lump hangs behind a resistance), right_node likewise.
+    left_node: first node that lies on the interval (1 where a lump hangs behind a resistance), right_node
+        likewise.
     """
 
     elements: Elements
@@ -138,8 +151,10 @@ def build_chain(elements: Elements, resolved: Resolved) -> Chain:
 
 
 @dataclass(eq=False)
-class _Links:
-    """(n, T) each: the condensed links at T values of lambda; m00, m01, m11: their masses -dS/dl; below: (T,)."""
+class Links:
+    """(n, T) each: the condensed links at T values of lambda; m00, m01, m11: their masses -dS/dl; below:
+    (T,).
+    """
 
     g: Array
     alpha: Array
@@ -156,7 +171,8 @@ class _Links:
     below: IntArray
 
 
-def _condense(chain: Chain, lam: Array, with_mass: bool) -> _Links:
+def condense(chain: Chain, lam: Array, with_mass: bool) -> Links:
+    """All links at the (T,) values of lambda, the nearest pole of each element kept apart."""
     el = chain.elements
     shape = (chain.links, lam.size)
     g = np.repeat(chain.conductance[:, None], lam.size, axis=1)
@@ -197,7 +213,7 @@ def _condense(chain: Chain, lam: Array, with_mass: bool) -> _Links:
             m01[at, part] = cross
             m00[at, part] = el.mass_c[:, 0, 0][:, None] + sums[:, :, 0] - sums[:, :, 1]
             m11[at, part] = el.mass_c[:, 1, 1][:, None] + sums[:, :, 2] - sums[:, :, 1]
-    return _Links(g, alpha, gamma, a1, a2, delta, theta, m1, m2, m00, m01, m11, below)
+    return Links(g, alpha, gamma, a1, a2, delta, theta, m1, m2, m00, m01, m11, below)
 
 
 def _away_from_zero(value: Array, scale: Array) -> Array:
@@ -208,11 +224,11 @@ def _away_from_zero(value: Array, scale: Array) -> Array:
 
 def count_below(chain: Chain, lam: Array) -> IntArray:
     """(T,) number of eigenvalues of the discrete problem below each lambda."""
-    links = _condense(chain, lam, with_mass=False)
-    return _sweep_left(chain, links, lam)[2]
+    links = condense(chain, lam, with_mass=False)
+    return sweep_left(chain, links, lam)[2]
 
 
-def _sweep_left(chain: Chain, k: _Links, lam: Array) -> tuple[Array, Array, IntArray]:
+def sweep_left(chain: Chain, k: Links, lam: Array) -> tuple[Array, Array, IntArray]:
     """x (n+1, T), point terms included; D (n, T); the count."""
     n = chain.links
     x = np.zeros((n + 1, lam.size))
@@ -239,7 +255,7 @@ def _sweep_left(chain: Chain, k: _Links, lam: Array) -> tuple[Array, Array, IntA
     return x, det, count
 
 
-def _sweep_right(chain: Chain, k: _Links, lam: Array) -> tuple[Array, Array]:
+def _sweep_right(chain: Chain, k: Links, lam: Array) -> tuple[Array, Array]:
     """y (n+1, T) without the node's own point terms, and D (n, T), from the right."""
     n = chain.links
     y = np.zeros((n + 1, lam.size))
@@ -271,7 +287,7 @@ class _Twist:
     second: Array
 
 
-def _choose_twist(chain: Chain, k: _Links, lam: Array, x: Array, y: Array) -> _Twist:
+def _choose_twist(chain: Chain, k: Links, lam: Array, x: Array, y: Array) -> _Twist:
     n, targets = chain.links, lam.size
     at = chain.element_of_link
     g_hat = np.where(at >= 0, chain.elements.g[np.maximum(at, 0)], chain.conductance)
@@ -322,13 +338,12 @@ def _choose_twist(chain: Chain, k: _Links, lam: Array, x: Array, y: Array) -> _T
 
 
 def _vector(
-    chain: Chain, k: _Links, lam: Array, x: Array, dx: Array, y: Array, dy: Array, twist: _Twist
+    chain: Chain, k: Links, lam: Array, x: Array, dx: Array, y: Array, dy: Array, twist: _Twist
 ) -> tuple[Array, Array]:
     """Node values (n+1, T) and pole amplitudes (n, T), 1 at the twist."""
     n, targets = chain.links, lam.size
     u = np.zeros((n + 1, targets))
     c = np.zeros((n, targets))
-    columns = np.arange(targets)
     node = np.flatnonzero(~twist.at_pole)
     u[twist.index[node], node] = 1.0
     pole = np.flatnonzero(twist.at_pole)
@@ -363,7 +378,7 @@ def _vector(
     return u, c
 
 
-def _mass(chain: Chain, k: _Links, u: Array, c: Array) -> Array:
+def _mass(chain: Chain, k: Links, u: Array, c: Array) -> Array:
     """(T,) squared norm of the condensed vectors, lumps included."""
     a, b = u[:-1], u[1:]
     links = a * a * k.m00 + 2.0 * a * b * k.m01 + b * b * k.m11
@@ -374,8 +389,8 @@ def _mass(chain: Chain, k: _Links, u: Array, c: Array) -> Array:
 
 def evaluate(chain: Chain, lam: Array) -> Evaluation:
     """Counts and Newton corrections at (T,) values of lambda."""
-    k = _condense(chain, lam, with_mass=True)
-    x, dx, count = _sweep_left(chain, k, lam)
+    k = condense(chain, lam, with_mass=True)
+    x, dx, count = sweep_left(chain, k, lam)
     y, dy = _sweep_right(chain, k, lam)
     twist = _choose_twist(chain, k, lam, x, y)
     u, c = _vector(chain, k, lam, x, dx, y, dy, twist)
@@ -384,8 +399,8 @@ def evaluate(chain: Chain, lam: Array) -> Evaluation:
 
 def eigenvectors(chain: Chain, lam: Array) -> Vectors:
     """Vectors of unit norm at (T,) converged eigenvalues."""
-    k = _condense(chain, lam, with_mass=True)
-    x, dx, _ = _sweep_left(chain, k, lam)
+    k = condense(chain, lam, with_mass=True)
+    x, dx, _ = sweep_left(chain, k, lam)
     y, dy = _sweep_right(chain, k, lam)
     twist = _choose_twist(chain, k, lam, x, y)
     u, c = _vector(chain, k, lam, x, dx, y, dy, twist)

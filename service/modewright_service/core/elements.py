@@ -2,10 +2,11 @@
 
 On each element u is a polynomial: two vertex functions (1 -+ t)/2 and the integrated Legendre functions
 b_j = (P_{j+1} - P_{j-1}) / sqrt(2(2j+1)) (Szabo and Babuska, Finite Element Analysis, 1991, sec. 3.1), for
-which the stiffness of a constant p is the identity up to a factor. With a shift s >= 0 that makes the bubbles'
-C = K_bb + s M_bb positive definite, C = L L^T and the decomposition of L^-1 M_bb L^-T give energy-orthonormal
-bubble modes v_j with masses theta_j = 1/(mu_j + s), mu_j the element's fixed-ends eigenvalues (theta_j = 0
-where w = 0). Vertex functions are extended C-orthogonally to the bubbles; then, with l = lambda + s,
+which the stiffness of a constant p is the identity up to a factor. With a shift s >= 0 that makes the
+bubbles' C = K_bb + s M_bb positive definite, C = L L^T and the decomposition of L^-1 M_bb L^-T give
+energy-orthonormal bubble modes v_j with masses theta_j = 1/(mu_j + s), mu_j the element's fixed-ends
+eigenvalues (theta_j = 0 where w = 0). Vertex functions are extended C-orthogonally to the bubbles; then, with
+l = lambda + s,
 
     S(l) = C_c - l M_c - l^2 sum_j m_j m_j^T / (1 - l theta_j)
 
@@ -85,7 +86,8 @@ class Elements:
 
     mesh: the coefficients they come from. reference: the shape functions.
     p, q, w: (E, G) coefficient values at the Gauss points; half: (E,) half lengths.
-    shift: (E,) s. theta: (E, J) descending masses of the bubble modes; modes: (E, J, J), columns v_j in bubbles.
+    shift: (E,) s. theta: (E, J) descending masses of the bubble modes; modes: (E, J, J), columns v_j in
+        bubbles.
     kappa: (E, J, 2) C(v_j, N_v); mass: (E, J, 2) m_j = M(v_j, psi_v).
     g: (E,) -C_c[0, 1]; rows: (E, 2) row sums of C_c; mass_c: (E, 2, 2) M_c.
     """

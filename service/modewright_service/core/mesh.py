@@ -1,9 +1,9 @@
 """Where the elements lie: fine enough in phase for the highest lambda asked for, in every layer.
 
 The phase of a mode over an element is int sqrt(|lambda w - q| / p) dx, oscillating or decaying. A polynomial
-of degree k resolves theta radians to rounding when k exceeds theta/2 + 3.6 (theta/2)^(1/3) by a few (the decay of
-Bessel coefficients J_k(theta/2) in a Legendre expansion: Abramowitz and Stegun, Handbook of Mathematical
-Functions, 1964, eqs. 9.3.1 and 10.1.47); variable coefficients need some more.
+of degree k resolves theta radians to rounding when k exceeds theta/2 + 3.6 (theta/2)^(1/3) by a few (the
+decay of Bessel coefficients J_k(theta/2) in a Legendre expansion: Abramowitz and Stegun, Handbook of
+Mathematical Functions, 1964, eqs. 9.3.1 and 10.1.47); variable coefficients need some more.
 """
 
 from __future__ import annotations
@@ -37,7 +37,9 @@ def fundamental(mesh: CoefficientMesh) -> float:
 
 
 def count_phase(mesh: CoefficientMesh, lam: float) -> float:
-    """Theta = int sqrt((lambda w - q)+ / p) dx over the domain; Theta / pi is about the count below lambda."""
+    """Theta = int sqrt((lambda w - q)+ / p) dx over the domain; Theta / pi is about the count below
+    lambda.
+    """
     p, q, w, dx = _sampled(mesh)
     return float((np.sqrt(np.maximum(lam * w - q, 0.0) / p) * dx).sum())
 
@@ -63,7 +65,9 @@ def top_for_phase(mesh: CoefficientMesh, phase: float, scale: float) -> float:
     return high
 
 
-def refine_for(mesh: CoefficientMesh, low: float, top: float, phase: float, least: int, most: int) -> CoefficientMesh:
+def refine_for(
+    mesh: CoefficientMesh, low: float, top: float, phase: float, least: int, most: int
+) -> CoefficientMesh:
     """Cut elements into parts of equal phase, at most `phase` each for every lambda in (low, top).
 
     least: elements wanted at least. most: where more would be needed, the phase allowed grows instead.
@@ -88,7 +92,9 @@ def refine_for(mesh: CoefficientMesh, low: float, top: float, phase: float, leas
         a, b = mesh.edges[e], mesh.edges[e + 1]
         if n > 1:
             local_p, local_q, local_w = mesh.p[e] @ vander, mesh.q[e] @ vander, mesh.w[e] @ vander
-            local = np.sqrt(np.maximum(np.abs(top * local_w - local_q), np.abs(low * local_w - local_q)) / local_p)
+            local = np.sqrt(
+                np.maximum(np.abs(top * local_w - local_q), np.abs(low * local_w - local_q)) / local_p
+            )
             # a floor keeps cuts inside where the density vanishes at a point
             local = local + 0.1 * local.max() + np.finfo(float).tiny
             travelled = np.concatenate([[0.0], np.cumsum(0.5 * (local[1:] + local[:-1]))])

@@ -18,10 +18,6 @@ __all__ = ["FluxDefect", "Modes", "flux_defects", "interior_zeros", "make_modes"
 
 Array = NDArray[np.float64]
 
-# Neighbours closer than this (relative to their size) are made orthogonal to each other explicitly: the error
-# of a vector is about rounding over relative gap, so beyond it 1e-12 is reached without.
-_CLOSE = 1e-4
-
 
 @dataclass(frozen=True, eq=False)
 class Modes:
@@ -39,8 +35,8 @@ class Modes:
         return np.ascontiguousarray(np.swapaxes(values, 0, 1)).reshape(values.shape[1], -1)
 
 
-def make_modes(chain: Chain, lam: Array, vectors: Vectors) -> Modes:
-    """Shape-function coefficients of unit norm, sign fixed, members of close groups orthonormal."""
+def make_modes(chain: Chain, vectors: Vectors) -> Modes:
+    """Shape-function coefficients of unit norm, sign fixed."""
     el = chain.elements
     at = np.flatnonzero(chain.element_of_link >= 0)
     left, right = vectors.nodes[at], vectors.nodes[at + 1]
@@ -50,38 +46,20 @@ def make_modes(chain: Chain, lam: Array, vectors: Vectors) -> Modes:
     bubbles = np.matmul(amplitudes, np.swapaxes(el.modes, 1, 2))
     shapes = np.concatenate([left[:, :, None], right[:, :, None], bubbles], axis=2)
     nodes = vectors.nodes
-    mixing = _mixing(chain, lam, shapes, nodes)
-    shapes = np.einsum("ts,esk->etk", mixing, shapes) if mixing.ndim == 2 else shapes * mixing[None, :, None]
-    nodes = nodes @ mixing.T if mixing.ndim == 2 else nodes * mixing
-    sign = _signs(chain, shapes, nodes)
-    return Modes(shapes * sign[None, :, None], nodes * sign)
+    factor = 1.0 / _norms(chain, shapes, nodes)
+    factor = factor * _signs(chain, shapes, nodes)
+    return Modes(shapes * factor[None, :, None], nodes * factor)
 
 
-def _mixing(chain: Chain, lam: Array, shapes: Array, nodes: Array) -> Array:
-    """(T,) factors to unit norm, or (T, T) with the rotations inside close groups."""
+def _norms(chain: Chain, shapes: Array, nodes: Array) -> Array:
+    """(T,) norms by quadrature, point masses included."""
     el = chain.elements
     values = np.matmul(shapes, el.reference.values.T)
     weights = el.w * (el.reference.weights * el.half[:, None])
-    norm2 = np.einsum("etg,eg->t", values * values, weights) + (chain.mass[:, None] * nodes**2).sum(axis=0)
-    factor = 1.0 / np.sqrt(norm2)
-    size = np.maximum(np.abs(lam[1:]), np.abs(lam[:-1])) + np.finfo(float).tiny
-    close = np.diff(lam) <= _CLOSE * size
-    if not close.any():
-        return factor
-    mixing = np.diag(factor)
-    starts = np.flatnonzero(np.concatenate([[True], ~close]))
-    for start, stop in zip(starts, np.append(starts[1:], lam.size), strict=True):
-        if stop - start < 2:
-            continue
-        group = values[:, start:stop] * factor[start:stop, None]
-        gram = np.einsum("eag,ebg,eg->ab", group, group, weights)
-        at_nodes = nodes[:, start:stop] * factor[start:stop]
-        gram += at_nodes.T @ (chain.mass[:, None] * at_nodes)
-        # Loewdin's symmetric orthonormalisation moves every member as little as possible
-        spectrum, basis = np.linalg.eigh(gram)
-        rotation = (basis / np.sqrt(np.maximum(spectrum, np.finfo(float).tiny))) @ basis.T
-        mixing[start:stop, start:stop] = rotation * factor[start:stop]
-    return mixing
+    norm2: Array = np.einsum("etg,eg->t", values * values, weights) + (chain.mass[:, None] * nodes**2).sum(
+        axis=0
+    )
+    return np.sqrt(norm2)
 
 
 def _signs(chain: Chain, shapes: Array, nodes: Array) -> Array:
@@ -167,8 +145,8 @@ def _joint_flux(
 def interior_zeros(chain: Chain, modes: Modes, legendre: Array) -> NDArray[np.int64]:
     """(T,) sign changes inside the interval, one across a resistance included, counted on the polynomials.
 
-    legendre: what :meth:`Modes.legendre` returned. Sampled at 2 k + 3 Chebyshev-Lobatto points an element, more
-    than twice as dense as the zeros that a polynomial of degree k with some twenty radians can have.
+    legendre: what :meth:`Modes.legendre` returned. Sampled at 2 k + 3 Chebyshev-Lobatto points an element,
+    more than twice as dense as the zeros that a polynomial of degree k with some twenty radians can have.
     """
     el = chain.elements
     k = el.reference.degree

@@ -1,8 +1,8 @@
 """Solve: from a problem to the record of its lowest eigenpairs.
 
-Coefficients become polynomials on a mesh (:mod:`.approximation`), the mesh is refined until the highest lambda
-is resolved in every layer (:mod:`.mesh`), elements are decomposed once (:mod:`.elements`), eigenvalues counted
-and found on the condensed chain (:mod:`.condensed`, :mod:`.spectrum`), modes and flux defects built
+Coefficients become polynomials on a mesh (:mod:`.approximation`), the mesh is refined until the highest
+lambda is resolved in every layer (:mod:`.mesh`), elements are decomposed once (:mod:`.elements`), eigenvalues
+counted and found on the condensed chain (:mod:`.condensed`, :mod:`.spectrum`), modes and flux defects built
 (:mod:`.modes`), bounds computed (:mod:`.bounds`). Where a bound's width is the discretisation's fault, the
 elements with the largest defects are halved and the step repeated.
 """
@@ -19,6 +19,7 @@ from numpy.typing import NDArray
 from modewright.record import EndInfo, Record
 from modewright_service.core.approximation import CoefficientMesh, approximate
 from modewright_service.core.bounds import Bounds, bound
+from modewright_service.core.clusters import separate
 from modewright_service.core.condensed import Chain, build_chain, count_below, eigenvectors
 from modewright_service.core.digest import ALGORITHM_VERSION, basis_key, problem_digest
 from modewright_service.core.elements import build_elements
@@ -91,7 +92,10 @@ def solve(
     scale = fundamental(coefficients)
     if scale == 0.0:
         raise SpectrumExhausted.at(
-            Reason.SPECTRUM_EXHAUSTED, "modes", "w is zero in every layer: only lumped masses carry lambda", str(count)
+            Reason.SPECTRUM_EXHAUSTED,
+            "modes",
+            "w is zero in every layer: only lumped masses carry lambda",
+            str(count),
         )
     wanted = count + _spare(count)
     mesh, top = coefficients, scale
@@ -116,7 +120,9 @@ def solve(
 
 
 def _spare(count: int) -> int:
-    """Modes beyond those wanted: the lower bounds need a gap above the last one that a comparison can meet."""
+    """Modes beyond those wanted: the lower bounds need a gap above the last one that a comparison can
+    meet.
+    """
     return 4 + count // 50
 
 
@@ -144,7 +150,10 @@ def _resolve_top(
             return chain, top
         phase += (wanted - found + 0.5) * np.pi
     raise NotConverged.at(
-        Reason.NOT_CONVERGED, "modes", f"only {found} eigenvalues were found within the mesh allowed", str(wanted)
+        Reason.NOT_CONVERGED,
+        "modes",
+        f"only {found} eigenvalues were found within the mesh allowed",
+        str(wanted),
     )
 
 
@@ -171,7 +180,7 @@ def _one_pass(
     values = lowest(chain, wanted, floor, top, scale, poll).values
     _check_counts(chain, values)
     poll()
-    modes = make_modes(chain, values, eigenvectors(chain, values))
+    modes = make_modes(chain, separate(chain, values, eigenvectors(chain, values), scale))
     poll()
     defect = flux_defects(chain, values, modes)
     mesh = chain.elements.mesh
@@ -190,7 +199,10 @@ def _check_counts(chain: Chain, values: Array) -> None:
     if wrong.size:
         n = int(clear[wrong[0]])
         raise NotConverged.at(
-            Reason.NOT_CONVERGED, "modes", f"{int(counts[wrong[0]])} eigenvalues counted below index {n + 1}", str(n)
+            Reason.NOT_CONVERGED,
+            "modes",
+            f"{int(counts[wrong[0]])} eigenvalues counted below index {n + 1}",
+            str(n),
         )
 
 
@@ -242,7 +254,8 @@ def _record(
         left_lump=modes.nodes[0, :count] if _has_lump(resolved.left) else none,
         right_lump=modes.nodes[-1, :count] if _has_lump(resolved.right) else none,
         joints=np.array(
-            [[joint.x, joint.resistance, joint.spring, joint.mass] for joint in resolved.joints], dtype=np.float64
+            [[joint.x, joint.resistance, joint.spring, joint.mass] for joint in resolved.joints],
+            dtype=np.float64,
         ).reshape(-1, 4),
         solve_seconds=seconds,
     )

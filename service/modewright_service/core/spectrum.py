@@ -23,7 +23,8 @@ Array = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 _EPS = float(np.finfo(float).eps)
-# Bisection halves a bracket; 200 rounds pass from 1e30 to one unit of rounding with room for Newton's retries.
+# Bisection halves a bracket; 200 rounds pass from 1e30 to one unit of rounding with room for Newton's
+# retries.
 _ROUNDS = 200
 
 
@@ -45,10 +46,14 @@ def floor_below(chain: Chain, scale: float) -> float:
         if int(count_below(chain, np.array([trial]))[0]) == 0:
             return trial
         trial *= 2.0
-    raise NotConverged.at(Reason.NOT_CONVERGED, "modes", "no lower end of the spectrum was found", repr(trial))
+    raise NotConverged.at(
+        Reason.NOT_CONVERGED, "modes", "no lower end of the spectrum was found", repr(trial)
+    )
 
 
-def lowest(chain: Chain, count: int, floor: float, top: float, scale: float, poll: Callable[[], None]) -> Spectrum:
+def lowest(
+    chain: Chain, count: int, floor: float, top: float, scale: float, poll: Callable[[], None]
+) -> Spectrum:
     """The `count` lowest eigenvalues, all of which lie in (floor, top).
 
     scale: size of a typical low eigenvalue, for the stopping rule near lambda = 0.
@@ -60,7 +65,9 @@ def lowest(chain: Chain, count: int, floor: float, top: float, scale: float, pol
     index = np.arange(count)
     above = np.searchsorted(counts, index, side="right")
     if int(counts[-1]) < count:
-        raise NotConverged.at(Reason.NOT_CONVERGED, "modes", f"{int(counts[-1])} found below the top", str(count))
+        raise NotConverged.at(
+            Reason.NOT_CONVERGED, "modes", f"{int(counts[-1])} found below the top", str(count)
+        )
     above = np.maximum(above, 1)
     low, high = grid[above - 1].copy(), grid[above].copy()
     count_low, count_high = counts[above - 1].copy(), counts[above].copy()
@@ -98,5 +105,7 @@ def lowest(chain: Chain, count: int, floor: float, top: float, scale: float, pol
         active[a[done]] = False
     if active.any():
         n = int(np.flatnonzero(active)[0])
-        raise NotConverged.at(Reason.NOT_CONVERGED, "modes", f"bracket of index {n} did not close", repr(value[n]))
+        raise NotConverged.at(
+            Reason.NOT_CONVERGED, "modes", f"bracket of index {n} did not close", repr(value[n])
+        )
     return Spectrum(np.maximum.accumulate(value), evaluations)
