@@ -86,7 +86,7 @@ def _with_bump(coefficient: str, height: float, width: float) -> dict[str, Any]:
 
 
 def _dense(document: dict[str, Any], width: float) -> tuple[np.ndarray, np.ndarray]:
-    """Eigenvalues and sizes, with elements one width wide to seven widths, then growing away from the bump."""
+    """Eigenvalues and sizes; elements one width wide to seven widths, then growing away from the bump."""
     near = width * np.arange(-7.0, 8.0)
     far = 7.0 * width * 2.0 ** np.arange(1.0, 14.0)
     cuts = CENTRE + np.concatenate([near, far[far < 0.3], -far[far < 0.3]])
