@@ -151,11 +151,7 @@ class Pieces:
         modes = self.record.coefficients[: c.shape[-1]]
         if flat.shape[0] * modes.shape[1] <= points.size * modes.shape[0]:
             # Few fields, many points: first one piecewise polynomial for each field.
-            if np.iscomplexobj(flat):
-                real = self._series(flat.real @ modes, points, quantity, side)
-                out: NDArray[Any] = real + 1j * self._series(flat.imag @ modes, points, quantity, side)
-            else:
-                out = self._series(flat @ modes, points, quantity, side)
+            out = self._series(flat @ modes, points, quantity, side)
         else:
             out = np.empty((flat.shape[0], points.size), dtype=flat.dtype)
             for chunk in _slices(points.size):
@@ -169,23 +165,9 @@ class Pieces:
         if name not in ("p", "q", "w"):
             raise ValueError(f"coefficient: {name!r}, needed 'p', 'q' or 'w'")
         element, t = self.locate(x, side)
-        return self._coefficient(name, element, t).reshape(np.shape(x))
+        return self.coefficient_at(name, element, t).reshape(np.shape(x))
 
-    # ---- inside ----
-
-    def _coefficient(
-        self, name: str, element: NDArray[np.intp], t: NDArray[np.float64]
-    ) -> NDArray[np.float64]:
-        series: NDArray[np.float64] = getattr(self.record, name)
-        out = np.empty(t.size)
-        for chunk in _slices(t.size):
-            table = legendre_vandermonde(t[chunk], series.shape[1] - 1)
-            out[chunk] = np.einsum("pk,kp->p", series[element[chunk]], table)
-        return out
-
-    def _series(
-        self, matrix: NDArray[np.float64], x: ArrayLike, quantity: Quantity, side: Side
-    ) -> NDArray[np.float64]:
+    def _series(self, matrix: NDArray[Any], x: ArrayLike, quantity: Quantity, side: Side) -> NDArray[Any]:
         """(M, S) piecewise series at the points x: (M,) + shape of x."""
         if quantity not in QUANTITIES:
             raise ValueError(f"quantity: {quantity!r}, needed one of {', '.join(QUANTITIES)}")
@@ -196,11 +178,9 @@ class Pieces:
         if np.any(np.diff(element) < 0):
             order = np.argsort(element, kind="stable")
             element, t, points = element[order], t[order], points[order]
-        out = np.empty((matrix.shape[0], t.size))
-        for chunk in _slices(t.size):
-            self._fill(matrix, element[chunk], t[chunk], quantity != "value", out[:, chunk])
+        out = self.at(element, t, matrix, derivative=quantity != "value")
         if quantity in ("flux", "flux-density"):
-            factor = self._coefficient("p", element, t)
+            factor = self.coefficient_at("p", element, t)
             if quantity == "flux-density":
                 factor = -factor / points**self.record.geometry
             out *= factor
@@ -210,13 +190,45 @@ class Pieces:
             out = unsorted
         return out.reshape((matrix.shape[0], *shape))
 
+    # ---- where elements and their own coordinate are known ----
+
+    def at(
+        self,
+        element: NDArray[np.intp],
+        t: NDArray[np.float64],
+        matrix: NDArray[Any] | None = None,
+        *,
+        derivative: bool = False,
+    ) -> NDArray[Any]:
+        """(M, P): piecewise series (M, S), default the modes, or d/dx of them, at t in [-1, 1] on elements.
+
+        element: (P,) ascending; t: (P,). Series may be complex.
+        """
+        if matrix is None:
+            matrix = self.record.coefficients
+        out = np.empty((matrix.shape[0], t.size), matrix.dtype)
+        for chunk in _slices(t.size):
+            self._fill(matrix, element[chunk], t[chunk], derivative, out[:, chunk])
+        return out
+
+    def coefficient_at(
+        self, name: Literal["p", "q", "w"], element: NDArray[np.intp], t: NDArray[np.float64]
+    ) -> NDArray[np.float64]:
+        """(P,): p, q or w at t in [-1, 1] on elements."""
+        series: NDArray[np.float64] = getattr(self.record, name)
+        out = np.empty(t.size)
+        for chunk in _slices(t.size):
+            table = legendre_vandermonde(t[chunk], series.shape[1] - 1)
+            out[chunk] = np.einsum("pk,kp->p", series[element[chunk]], table)
+        return out
+
     def _fill(
         self,
-        matrix: NDArray[np.float64],
+        matrix: NDArray[Any],
         element: NDArray[np.intp],
         t: NDArray[np.float64],
         derivative: bool,
-        out: NDArray[np.float64],
+        out: NDArray[Any],
     ) -> None:
         """One chunk of points, sorted by element, into `out` (M, points)."""
         record, offsets = self.record, self._offsets
