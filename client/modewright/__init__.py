@@ -101,7 +101,7 @@ _HOMES = {
 }
 _HOME = {name: module for module, names in _HOMES.items() for name in names}
 
-__all__ = sorted([*_HOME, "__version__"])  # noqa: PLE0605
+__all__ = sorted([*_HOME, "__version__"])
 
 
 def __getattr__(name: str) -> Any:

@@ -97,7 +97,8 @@ class Checks:
             self.wrong(name, "is too large for a floating point number", reason="NOT_FINITE")
             return math.nan
         if math.isnan(number) or (math.isinf(number) and not infinite):
-            self.wrong(name, "must be finite" if not infinite else "must not be NaN", number, reason="NOT_FINITE")
+            message = "must not be NaN" if infinite else "must be finite"
+            self.wrong(name, message, number, reason="NOT_FINITE")
             return math.nan
         # -0.0 is no other number than 0.0, and must not make another document of it.
         return number + 0.0

@@ -23,8 +23,8 @@
 
 Each carries ``reason`` (a name of the contract's ``ErrorReason``, or an empty string), ``violations`` (which
 field of the document or request, what is wrong, and the offending number), and ``metadata`` (the numbers the
-service sent along). ``str()`` names the field and the number. All of them pickle. Nothing here needs gRPC; the
-decoding of a gRPC status is in :mod:`modewright.status`.
+service sent along). ``str()`` names the field and the number. All of them pickle. Nothing here needs gRPC;
+the decoding of a gRPC status is in :mod:`modewright.status`.
 """
 
 from __future__ import annotations
@@ -151,7 +151,9 @@ class SpectrumExhausted(ModewrightError):
 
 
 class LimitExceeded(ModewrightError):
-    """Larger than the service accepts, or its queue is full (then ``retry_after`` may say when to come back)."""
+    """Larger than the service accepts, or its queue is full (then ``retry_after`` may say when to come
+    back).
+    """
 
 
 class NotConverged(ModewrightError):

@@ -10,8 +10,9 @@ A :class:`Problem` says -(p u')' + q u = lambda w u on consecutive layers, with 
     )
 
 The same thing as a document (a JSON, TOML or YAML file, or a dictionary) is read by :meth:`Problem.load` and
-:meth:`Problem.from_dict`; the fields have the same names. Everything here is immutable, compares by content and
-pickles. Only the structure is checked here (InvalidProblem lists every complaint); the service checks the numbers.
+:meth:`Problem.from_dict`; the fields have the same names. Everything here is immutable, compares by content
+and pickles. Only the structure is checked here (InvalidProblem lists every complaint); the service checks
+the numbers.
 """
 
 from __future__ import annotations
@@ -28,7 +29,6 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from modewright.checks import Checks, quote
-from modewright.errors import InvalidProblem
 
 if TYPE_CHECKING:
     from modewright.stack import Stack
@@ -153,8 +153,8 @@ def coefficient(checks: Checks, name: str, value: object) -> Coefficient:
 class Layer:
     """One piece of the interval, from `start` to `end` (may be infinite).
 
-    p, q, w: each a number, an expression in x, or :class:`Samples`; in cylindrical and spherical geometry those of
-    the material, without the factor r or r squared. reciprocal_p: `p` holds 1/p instead.
+    p, q, w: each a number, an expression in x, or :class:`Samples`; in cylindrical and spherical geometry
+    those of the material, without the factor r or r squared. reciprocal_p: `p` holds 1/p instead.
     """
 
     start: float
@@ -219,7 +219,9 @@ class Robin(End):
 
 @dataclass(frozen=True)
 class Film(End):
-    """A film coefficient h = `film` >= 0 to the outside: p u' = h u at the left end, -p u' = h u at the right."""
+    """A film coefficient h = `film` >= 0 to the outside: p u' = h u at the left end, -p u' = h u at the
+    right.
+    """
 
     film: float
     kind: ClassVar[str] = "film"
@@ -229,9 +231,9 @@ class Film(End):
 class Lump(End):
     """A lumped mass that carries lambda: a tip mass, well-mixed water, a vessel.
 
-    mass: its mass or heat capacity (per area of the face in cylindrical and spherical geometry; for water that
-    fills a pipe of radius r: rho c r / 2). film: from the lump to the outside. resistance: between the lump and
-    the end of the interval; 0 means that the lump has the end's own value.
+    mass: its mass or heat capacity (per area of the face in cylindrical and spherical geometry; for water
+    that fills a pipe of radius r: rho c r / 2). film: from the lump to the outside. resistance: between the
+    lump and the end of the interval; 0 means that the lump has the end's own value.
     """
 
     mass: float
@@ -414,4 +416,3 @@ def _all_are(checks: Checks, name: str, items: tuple[object, ...], kind: type) -
     for index, item in enumerate(items):
         if not isinstance(item, kind):
             checks.wrong(f"{name}[{index}]", f"must be {kind.__name__}, not {quote(item)}")
-

@@ -1,10 +1,11 @@
 """Stacks of material layers: walls, pipe walls and shells described by thickness and material.
 
-A :class:`Stack` is what a thermal engineer has in hand - thickness, conductivity, volumetric heat capacity, contact
-resistances, what is on both sides - in plane, cylindrical or spherical geometry. ``problem()`` makes the
-:class:`~modewright.problem.Problem` of it: conductivity becomes p, heat capacity w, positions are added up from `start`.
-The geometry factor r**g is not multiplied in here: a problem holds material coefficients and its geometry, and the
-service applies the factor once, to coefficients, films, resistances and lumps alike.
+A :class:`Stack` is what a thermal engineer has in hand - thickness, conductivity, volumetric heat capacity,
+contact resistances, what is on both sides - in plane, cylindrical or spherical geometry. ``problem()``
+makes the :class:`~modewright.problem.Problem` of it: conductivity becomes p, heat capacity w, positions are
+added up from `start`. The geometry factor r**g is not multiplied in here: a problem holds material
+coefficients and its geometry, and the service applies the factor once, to coefficients, films, resistances
+and lumps alike.
 
 Any consistent units do. In SI: m, W/(m K), J/(m3 K), m2 K/W, W/(m2 K) make lambda a decay rate in 1/s.
 
@@ -25,6 +26,14 @@ from modewright.problem import GEOMETRIES, Coefficient, End, Interface, Layer, P
 __all__ = ["Stack", "StackLayer"]
 
 _LAYER_FIELDS = {"p": "conductivity", "w": "heat_capacity", "start": "thickness", "end": "thickness"}
+_STACK_FIELDS = {
+    "left": "inner",
+    "right": "outer",
+    "geometry": "geometry",
+    "layers": "layers",
+    "interfaces": "layers",
+    "domain": "layers",
+}
 
 
 @dataclass(frozen=True)
@@ -32,7 +41,8 @@ class StackLayer:
     """One material layer.
 
     thickness: > 0. conductivity, heat_capacity (volumetric): numbers, expressions in x or
-    :class:`~modewright.problem.Samples`, both over the absolute coordinate (the radius, not the depth in the layer).
+    :class:`~modewright.problem.Samples`, both over the absolute coordinate (the radius, not the depth in
+    the layer).
     contact_resistance: to the next layer, >= 0, per area.
     """
 
@@ -155,7 +165,7 @@ class Stack:
         return [index for index, layer in enumerate(self.layers) if layer.contact_resistance]
 
     def field_in_document(self, path: str) -> str:
-        """The stack's own name for a field of its problem: ``layers[1].p`` is ``stack.layers[1].conductivity``."""
+        """The stack's own name for a field of its problem: ``layers[0].p`` is ``layers[0].conductivity``."""
         match = re.fullmatch(r"(layers|interfaces)\[(\d+)\](?:\.(\w+)(.*))?|(\w+)(.*)", path)
         if match is None:
             return path
@@ -168,9 +178,5 @@ class Stack:
             if int(number) >= len(contacts):
                 return "stack.layers"
             return f"stack.layers[{contacts[int(number)]}].contact_resistance"
-        if word == "domain":
-            return "stack.layers"
-        return f"stack.{ {'left': 'inner', 'right': 'outer'}.get(word, word) }{tail}" if word in _STACK_WORDS else path
-
-
-_STACK_WORDS = ("left", "right", "geometry", "layers", "interfaces")
+        known = _STACK_FIELDS.get(word)
+        return f"stack.{known}{tail}" if known else path

@@ -128,7 +128,7 @@ def _layer(message: pb.Layer) -> Layer:
 
 
 def _coefficient(layer: pb.Layer, name: str, default: float) -> Coefficient:
-    if not layer.HasField(name):  # type: ignore[arg-type]
+    if not layer.HasField(name):
         return default
     message: pb.Coefficient = getattr(layer, name)
     form = message.WhichOneof("form")

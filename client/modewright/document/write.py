@@ -1,8 +1,8 @@
 """From a Problem to its document: the canonical form, from which an equal problem is read again.
 
-Numbers are floats, samples are inline whatever file they came from, and fields that are empty or zero by default
-are left out. Infinite ends are native floats in the dictionary and the words "inf" and "-inf" in JSON text,
-which has no infinities.
+Numbers are floats, samples are inline whatever file they came from, and fields that are empty or zero by
+default are left out. Infinite ends are native floats in the dictionary and the words "inf" and "-inf" in
+JSON text, which has no infinities.
 """
 
 from __future__ import annotations
