@@ -148,7 +148,9 @@ def build_parser() -> argparse.ArgumentParser:
         help="array of the cell edges, for cell averages (default: edges)",
     )
     project.add_argument(
-        "--measure", choices=MEASURES, help="measure of the cell averages (default: the file's, else length)"
+        "--measure",
+        choices=MEASURES,
+        help="measure of the cell averages (default: the file's, else the geometry's)",
     )
     project.add_argument(
         "--interpolation", choices=("linear", "cubic"), help="between points (default: cubic)"

@@ -80,10 +80,14 @@ def solve(options: argparse.Namespace) -> dict[str, Any]:
         if target is not None and target.suffix.lower() == ".csv":
             write_table(target, ("n", *columns), (np.arange(len(basis.eigenvalues)), *columns.values()))
         elif target is not None:
-            arrays = {**columns, "basis_key": basis.key, "problem_digest": basis.problem_digest}
+            arrays: dict[str, npt.ArrayLike] = {
+                **columns,
+                "basis_key": basis.key,
+                "problem_digest": basis.problem_digest,
+            }
             if options.points is not None:
-                arrays["x"] = _evenly(options)
-                arrays["modes"] = basis.modes(arrays["x"])
+                x = _evenly(options)
+                arrays |= {"x": x, "modes": basis.modes(x)}
             write_arrays(target, arrays)
         if options.save_basis is not None:
             basis.save(options.save_basis)
@@ -104,8 +108,7 @@ def _lump(options: argparse.Namespace, side: str, snapshots: Snapshots) -> Array
     """A lump's own values: what the option names or says, else what the file has under the usual name."""
     given = getattr(options, f"{side}_lump")
     if isinstance(given, float):
-        batch = np.delete(np.array(snapshots.values.shape), options.axis)
-        return np.full(tuple(batch), given)
+        return given
     if given is not None and given not in snapshots.arrays:
         raise InputFileError(options.snapshots, f"has no array {given!r} for --{side}-lump")
     return snapshots.arrays.get(given or f"{side}_lump")
@@ -126,7 +129,7 @@ def project(options: argparse.Namespace) -> dict[str, Any]:
         keywords["axis"] = options.axis
         if snapshots.edges is not None:
             keywords["edges"] = snapshots.edges
-            keywords["measure"] = options.measure or snapshots.measure or "length"
+            keywords["measure"] = options.measure or snapshots.measure
         else:
             keywords["x"] = snapshots.x
         for side in ("left", "right"):

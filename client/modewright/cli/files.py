@@ -73,7 +73,9 @@ def _suffix(path: Path) -> str:
 
 def _read_npz(path: Path) -> dict[str, Array]:
     try:
-        with np.load(path, allow_pickle=False) as archive:
+        # Opened here: numpy leaves a file that it opened itself to the collector when the archive is damaged.
+        with path.open("rb") as handle:
+            archive = np.load(handle, allow_pickle=False)
             if not isinstance(archive, np.lib.npyio.NpzFile):
                 raise InputFileError(path, "is one array, not an NPZ archive of named ones")
             return {name: archive[name] for name in archive.files}
@@ -170,10 +172,8 @@ def _snapshots_from_table(path: Path, x: str) -> Snapshots:
         gaps = np.flatnonzero(table[1:, 0] != table[:-1, 1])
         if len(gaps):
             row = int(gaps[0])
-            raise InputFileError(
-                path,
-                f"cell {row + 2} starts at {table[row + 1, 0]!r}, the one before ends at {table[row, 1]!r}",
-            )
+            start, end = float(table[row + 1, 0]), float(table[row, 1])
+            raise InputFileError(path, f"cell {row + 2} starts at {start!r}, the one before ends at {end!r}")
         edges = np.concatenate([table[:1, 0], table[:, 1]])
         snapshots = Snapshots(table[:, 2:].T, edges=edges)
     else:

@@ -106,7 +106,7 @@ def examine(basis: modewright.Basis, pipe: BuriedPipe, cooling: Cooling) -> Find
     for where, side in parts:
         modes[:, where] = basis.modes(points[where], side=side)
         fields[:, where] = basis.reconstruct(coefficients, x=points[where], side=side)
-    water_modes = np.asarray(basis.pieces().record.left_lump)
+    water_modes = basis.record().left_lump
     outer = np.array([pipe.outer_radius])
 
     def flux(of: Floats) -> Floats:

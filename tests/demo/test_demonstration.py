@@ -1,0 +1,168 @@
+"""The whole demonstration on the real service, judged by numbers that it did not make itself.
+
+The eigenvalues are compared with those of the finite-volume network's own matrix (SciPy's tridiagonal
+solver), extrapolated from three meshes by Richardson's rule for second order; no modal code has a part in
+those.
+"""
+
+import csv
+import io
+import json
+import subprocess
+import sys
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pytest
+from scipy.linalg import eigh_tridiagonal
+
+import modewright
+from modewright.demo import run_demonstration
+from modewright.demo.finite_volume import Network, graded_mesh
+from modewright.demo.pipe import invented_pipe
+from modewright.demo.run import CELLS, MODES
+
+FILES = {
+    "basis.record",
+    "coefficients.npz",
+    "cooling.png",
+    "foam-conductivity.csv",
+    "modes.csv",
+    "outer-flux.csv",
+    "problem.toml",
+    "snapshots.npz",
+    "summary.json",
+}
+
+
+@dataclass(frozen=True)
+class Outcome:
+    folder: Path
+    text: str
+    summary: dict[str, Any]
+
+
+@pytest.fixture(scope="module")
+def outcome(service: modewright.Service, tmp_path_factory: pytest.TempPathFactory) -> Outcome:
+    folder = tmp_path_factory.mktemp("demonstration") / "results"
+    out = io.StringIO()
+    run_demonstration(folder, service.address, out)
+    summary = json.loads((folder / "summary.json").read_text(encoding="utf-8"))
+    return Outcome(folder, out.getvalue(), summary)
+
+
+def network_eigenvalues(refinement: int, count: int) -> np.ndarray:
+    pipe = invented_pipe()
+    network = Network.of(pipe, graded_mesh(pipe.layers, [refinement * n for n in CELLS]), pipe.still_film)
+    capacity, conductance = network.capacities, network.conductances
+    diagonal = (conductance + np.concatenate([[0.0], conductance[:-1]])) / capacity
+    beside = -conductance[:-1] / np.sqrt(capacity[:-1] * capacity[1:])
+    return np.asarray(eigh_tridiagonal(diagonal, beside, True, select="i", select_range=(0, count - 1)))
+
+
+def test_eigenvalues_agree_with_the_extrapolated_network(outcome: Outcome) -> None:
+    coarse, middle, fine = (network_eigenvalues(2**k, 6) for k in range(3))
+    np.testing.assert_allclose(np.log2((coarse - middle) / (middle - fine)), 2.0, atol=0.05)
+    extrapolated = fine + (fine - middle) / 3.0
+    computed = np.array(outcome.summary["eigenvalues_per_s"])[:6]
+    # What is left after extrapolation is of fourth order: a small part of what the last halving changed.
+    assert np.all(np.abs(computed - extrapolated) < 0.01 * np.abs(fine - middle) + 1e-12 * extrapolated)
+
+
+def test_bounds_enclose_and_are_narrow(outcome: Outcome) -> None:
+    value, lower, upper = (
+        np.array(outcome.summary[name]) for name in ("eigenvalues_per_s", "lower_per_s", "upper_per_s")
+    )
+    assert len(value) == MODES
+    assert np.all(lower <= value)
+    assert np.all(value <= upper)
+    assert np.all(upper - lower <= 1e-9 * np.maximum(value, value[1]))
+
+
+def test_modes_agree_with_finite_volumes_within_the_latters_error(outcome: Outcome) -> None:
+    summary = outcome.summary
+    own = summary["finite_volume_change_on_halving"]
+    assert summary["outer_flux_largest_relative_difference"] < own["outer_flux"]
+    assert summary["foretold_flux_largest_relative_difference"] < own["outer_flux"]
+    assert summary["foretold_water_largest_difference_K"] < own["water_K"]
+    assert summary["relative_residual_largest"] < 1e-4
+
+
+def test_shares_add_up(outcome: Outcome) -> None:
+    shares = np.array(outcome.summary["share_of_first_snapshot"])
+    left = np.array(outcome.summary["share_left_after_mode"])
+    np.testing.assert_allclose(np.cumsum(shares) + left, 1.0, rtol=0.0, atol=1e-9)
+    assert np.all(np.diff(left) < 0.0)
+    assert outcome.summary["captured_share_smallest"] > 0.999
+
+
+def test_tables_are_printed_and_written(outcome: Outcome) -> None:
+    with (outcome.folder / "modes.csv").open(encoding="utf-8") as handle:
+        rows = list(csv.DictReader(handle))
+    assert [int(row["n"]) for row in rows] == list(range(MODES))
+    assert float(rows[0]["1/lambda [h]"]) == pytest.approx(outcome.summary["time_constants_h"][0], rel=1e-4)
+    for row in rows:
+        assert row["lower bound [1/s]"] in outcome.text
+    with (outcome.folder / "outer-flux.csv").open(encoding="utf-8") as handle:
+        assert len(list(csv.DictReader(handle))) == outcome.summary["snapshots"]
+
+
+def test_cautions_are_printed_and_written(outcome: Outcome) -> None:
+    for text in (outcome.text.replace("\n", " "), outcome.summary["caution"]):
+        assert "not a design approval" in text
+        assert "local codes and licensed practice decide" in text
+        assert "invented" in text
+
+
+def test_every_file_is_there(outcome: Outcome) -> None:
+    assert {path.name for path in outcome.folder.iterdir()} == FILES
+    assert (outcome.folder / "cooling.png").read_bytes().startswith(b"\x89PNG\r\n\x1a\n")
+
+
+def test_the_written_files_do_the_job_again(
+    outcome: Outcome, service: modewright.Service, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """Document, snapshots and coefficients fit the command line as they are."""
+    from modewright.cli import main
+
+    out = tmp_path / "coefficients.npz"
+    given = ["project", str(outcome.folder / "problem.toml"), "--modes", str(MODES)]
+    given += [
+        "--snapshots",
+        str(outcome.folder / "snapshots.npz"),
+        "-o",
+        str(out),
+        "--service",
+        service.address,
+    ]
+    assert main(given) == 0, capsys.readouterr().err
+    with np.load(out) as again, np.load(outcome.folder / "coefficients.npz") as first:
+        np.testing.assert_array_equal(again["coefficients"], first["coefficients"])
+        assert str(again["basis_key"]) == str(first["basis_key"])
+
+
+def test_the_saved_basis_needs_no_service(outcome: Outcome) -> None:
+    basis = modewright.load_basis(outcome.folder / "basis.record")
+    pipe = invented_pipe()
+    flux = basis.modes(np.array([pipe.outer_radius]), quantity="flux-density", side="left")[:, 0]
+    value = basis.modes(np.array([pipe.outer_radius]), side="left")[:, 0]
+    # The film's own law, -k u' = h u at the casing, which no part of the demonstration imposes on the modes.
+    np.testing.assert_allclose(flux, pipe.soil_film * value, rtol=1e-6)
+
+
+def test_without_matplotlib_it_says_so_and_goes_on(service: modewright.Service, tmp_path: Path) -> None:
+    script = (
+        "import sys\n"
+        "sys.modules['matplotlib'] = None\n"
+        "from modewright.cli import main\n"
+        "sys.exit(main(sys.argv[1:]))\n"
+    )
+    arguments = ["demo", "--output", str(tmp_path / "out"), "--service", service.address]
+    done = subprocess.run(
+        [sys.executable, "-c", script, *arguments], capture_output=True, text=True, check=False
+    )
+    assert done.returncode == 0, done.stderr
+    assert "No picture: matplotlib is not installed" in done.stdout
+    assert {path.name for path in (tmp_path / "out").iterdir()} == FILES - {"cooling.png"}
