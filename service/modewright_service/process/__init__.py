@@ -1,0 +1,1 @@
+"""The service as a process: settings, supervised workers, spool, lifecycle, telemetry."""

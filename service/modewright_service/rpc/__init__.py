@@ -1,0 +1,1 @@
+"""gRPC at the edge: servicers, interceptors, conversion of messages, mapping of errors."""
