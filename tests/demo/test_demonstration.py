@@ -55,7 +55,7 @@ def network_eigenvalues(refinement: int, count: int) -> np.ndarray:
     pipe = invented_pipe()
     network = Network.of(pipe, graded_mesh(pipe.layers, [refinement * n for n in CELLS]), pipe.still_film)
     # Entry (i, j) of the inverse is the resistance from the outer one of the two to the soil: no
-    # cancellation, and the slow modes come out as the largest, whereas the matrix itself has the steel's rates in it.
+    # cancellation, and the slow modes come out as the largest; the matrix itself has the steel's rates in it.
     to_soil = np.cumsum(1.0 / network.conductances[::-1])[::-1]
     place = np.arange(len(to_soil))
     root = np.sqrt(network.capacities)

@@ -33,6 +33,8 @@ FAINT = "#8795a1"
 # Shades of the layers from the water outwards, quiet enough to lie under lines.
 SHADES = ("#c9d3dc", "#fbf1d5", "#dcd7d2")
 WATER_SHADE = "#dceaf5"
+# Width of the strip that stands for the water left of the wall, mm.
+WATER_STRIP = 3.5
 MODE_COLOURS = ("#8c2d04", "#d9601a", "#2b7a78", "#3b5b92", "#7a4fa3")
 # Below this share of its start a coefficient is the finite-volume program's own error.
 DECAY_FLOOR = 1e-6
@@ -91,21 +93,39 @@ def _temper(axes: Axes, title: str, xlabel: str, ylabel: str) -> None:
         axes.spines[side].set_color(FAINT)
 
 
-def _shade_layers(axes: Axes, pipe: BuriedPipe, names: bool) -> None:
-    for layer, shade in zip(pipe.layers, SHADES, strict=True):
-        axes.axvspan(layer.inner * 1e3, layer.outer * 1e3, color=shade, zorder=0, linewidth=0)
-        if names:
-            middle = (layer.inner + layer.outer) * 500.0
-            axes.annotate(
-                layer.name,
-                (middle, 0.0),
-                xycoords=("data", "axes fraction"),
-                xytext=(0, 5),
-                textcoords="offset points",
-                ha="center",
-                fontsize=8,
-                color=FAINT,
-            )
+def _dots(colour: Any, size: float = 3.4) -> dict[str, Any]:
+    """Style of what the finite-volume program found."""
+    return {"marker": "o", "ms": size, "mfc": "white", "mec": colour, "mew": 0.9, "ls": "none"}
+
+
+def _shade_layers(axes: Axes, pipe: BuriedPipe) -> None:
+    """Shade and name water and layers over a radius in mm, and set the axis to them."""
+    inner = pipe.inner_radius * 1e3
+    spans = [("water", inner - WATER_STRIP, inner, WATER_SHADE)]
+    spans += [
+        (layer.name, layer.inner * 1e3, layer.outer * 1e3, shade)
+        for layer, shade in zip(pipe.layers, SHADES, strict=True)
+    ]
+    for name, start, end, shade in spans:
+        axes.axvspan(start, end, color=shade, zorder=0, linewidth=0)
+        axes.annotate(
+            name,
+            ((start + end) / 2.0, 0.0),
+            xycoords=("data", "axes fraction"),
+            xytext=(0, 5),
+            textcoords="offset points",
+            ha="center",
+            fontsize=8,
+            color=FAINT,
+        )
+    axes.set_xlim(inner - WATER_STRIP, pipe.outer_radius * 1e3)
+
+
+def _time_axis(axes: Axes, hours: Floats) -> None:
+    """A logarithmic axis of hours, named in words."""
+    axes.set_xscale("log")
+    axes.set_xticks((1 / 60, 0.1, 1.0, 10.0, 72.0), ["1 min", "6 min", "1 h", "10 h", "72 h"])
+    axes.set_xlim(float(hours[1]) * 0.9, float(hours[-1]) * 1.1)
 
 
 def _sections(figure: Figure, cell: Any, pipe: BuriedPipe, cooling: Cooling, findings: Findings) -> None:
@@ -160,43 +180,23 @@ def _sections(figure: Figure, cell: Any, pipe: BuriedPipe, cooling: Cooling, fin
 
 
 def _modes(axes: Axes, pipe: BuriedPipe, findings: Findings) -> None:
-    """The first modes over the radius, scaled to a largest value of one; the water's value as a dot."""
-    _shade_layers(axes, pipe, names=True)
-    margin = 3.0
-    axes.axvspan(
-        pipe.inner_radius * 1e3 - margin, pipe.inner_radius * 1e3, color=WATER_SHADE, zorder=0, linewidth=0
-    )
+    """The first modes over the radius, scaled to a largest value of one; the water's value in its strip."""
+    _shade_layers(axes, pipe)
+    inner = pipe.inner_radius * 1e3
     for n in range(min(SHOWN_MODES, len(findings.modes))):
         size = max(float(np.abs(findings.modes[n]).max()), abs(float(findings.water_modes[n])))
-        span = findings.time_constants[n]
+        colour, water = MODE_COLOURS[n], findings.water_modes[n] / size
         axes.plot(
             findings.points * 1e3,
             findings.modes[n] / size,
-            color=MODE_COLOURS[n],
+            color=colour,
             lw=1.8,
-            label=f"n = {n}: {duration(span)}",
+            label=f"n = {n}: {duration(findings.time_constants[n])}",
         )
-        axes.plot(
-            pipe.inner_radius * 1e3 - margin / 2.0,
-            findings.water_modes[n] / size,
-            "o",
-            ms=5,
-            color=MODE_COLOURS[n],
-        )
+        axes.plot([inner - WATER_STRIP, inner], [water, water], color=colour, lw=1.8)
     axes.axhline(0.0, color=FAINT, lw=0.6)
-    axes.set_xlim(pipe.inner_radius * 1e3 - margin, pipe.outer_radius * 1e3)
     axes.set_ylim(-1.25, 1.6)
     axes.set_yticks((-1.0, -0.5, 0.0, 0.5, 1.0))
-    axes.annotate(
-        "water",
-        (pipe.inner_radius * 1e3 - margin / 2.0, 0.0),
-        xycoords=("data", "axes fraction"),
-        xytext=(0, 5),
-        textcoords="offset points",
-        ha="center",
-        fontsize=8,
-        color=FAINT,
-    )
     _temper(axes, "Modes and their time constants", "radius, mm", "φₙ / max |φₙ|")
     axes.legend(loc="upper right", ncols=3, fontsize=8.5, frameon=False, labelcolor=INK)
 
@@ -205,63 +205,53 @@ def _profiles(axes: Axes, pipe: BuriedPipe, cooling: Cooling, findings: Findings
     """Temperature over the radius: cell averages as dots, the reconstruction as lines."""
     from matplotlib import colormaps
 
-    _shade_layers(axes, pipe, names=False)
+    _shade_layers(axes, pipe)
+    soil, inner = pipe.soil_temperature, pipe.inner_radius * 1e3
     centres = cooling.mesh.centroids * 1e3
     shades = colormaps["inferno"](np.linspace(0.78, 0.08, len(PROFILE_HOURS)))
     for shade, hour in zip(shades, PROFILE_HOURS, strict=True):
         i = _nearest(cooling, hour)
-        axes.plot(findings.points * 1e3, findings.fields[i] + pipe.soil_temperature, color=shade, lw=1.6)
-        axes.plot(
-            centres[::3],
-            cooling.cells[i, ::3] + pipe.soil_temperature,
-            "o",
-            ms=3.2,
-            mfc="white",
-            mec=shade,
-            mew=0.9,
-        )
+        water = findings.water[i] + soil
+        axes.plot([inner - WATER_STRIP, inner], [water, water], color=shade, lw=1.6)
+        axes.plot(findings.points * 1e3, findings.fields[i] + soil, color=shade, lw=1.6)
+        axes.plot(inner - WATER_STRIP / 2.0, cooling.water[i] + soil, **_dots(shade))
+        axes.plot(centres[::3], cooling.cells[i, ::3] + soil, **_dots(shade))
         axes.annotate(
             "0 h" if hour == 0.0 else duration(cooling.times[i]),
-            (pipe.layers[0].inner * 1e3, findings.fields[i, 0] + pipe.soil_temperature),
-            xytext=(-4, 0),
+            (inner, water),
+            xytext=(0, 5),
             textcoords="offset points",
-            ha="right",
-            va="center",
-            fontsize=8.5,
+            ha="center",
+            fontsize=9,
             color=shade,
         )
     axes.plot([], [], color=INK, lw=1.6, label="reconstructed from the modes")
-    axes.plot([], [], "o", ms=3.2, mfc="white", mec=INK, label="finite volumes (every third cell)")
-    axes.axhline(pipe.soil_temperature, color=FAINT, lw=0.8, ls=":")
-    axes.set_xlim(pipe.inner_radius * 1e3 - 4.0, pipe.outer_radius * 1e3)
-    _temper(axes, "Temperature through the wall", "radius, mm", "°C")
-    axes.legend(
-        loc="upper right", fontsize=8.5, frameon=True, framealpha=0.85, edgecolor="none", labelcolor=INK
+    axes.plot([], [], **_dots(INK), label="finite volumes (every third cell)")
+    axes.axhline(soil, color=FAINT, lw=0.8, ls=":")
+    axes.annotate(
+        "undisturbed soil",
+        (95.0, soil),
+        xytext=(0, 3),
+        textcoords="offset points",
+        fontsize=8,
+        color=FAINT,
     )
+    axes.set_ylim(0.0, 120.0)
+    _temper(axes, "Temperature through the wall", "radius, mm", "°C")
+    axes.legend(loc="upper right", fontsize=8.5, frameon=False, labelcolor=INK)
 
 
 def _flux(axes: Axes, pipe: BuriedPipe, cooling: Cooling, findings: Findings) -> None:
     """Heat flux into the soil over time, per area and per metre of pipe."""
     hours = cooling.times / HOUR
-    around = 2.0 * math.pi * pipe.outer_radius
-    axes.plot(
-        hours[1:],
-        findings.foretold_flux[1:],
-        color="#d9601a",
-        lw=2.2,
-        label="foretold from the first snapshot",
-    )
-    axes.plot(
-        hours[1:], cooling.outer_flux[1:], "o", ms=3.6, mfc="white", mec=INK, mew=0.9, label="finite volumes"
-    )
-    axes.set_xscale("log")
-    ticks = (1 / 60, 0.1, 1.0, 10.0, 72.0)
-    axes.set_xticks(ticks, ["1 min", "6 min", "1 h", "10 h", "72 h"])
-    axes.set_xlim(hours[1] * 0.9, hours[-1] * 1.1)
-    peak = int(np.argmax(findings.foretold_flux))
+    flux = findings.foretold_flux
+    axes.plot(hours[1:], flux[1:], color=MODE_COLOURS[1], lw=2.2, label="foretold from the first snapshot")
+    axes.plot(hours[1:], cooling.outer_flux[1:], **_dots(INK), label="finite volumes")
+    _time_axis(axes, hours)
+    peak = int(np.argmax(flux))
     axes.annotate(
-        f"the last peak's heat arrives:\n{findings.foretold_flux[peak]:.1f} W/m² after {hours[peak]:.1f} h",
-        (hours[peak], findings.foretold_flux[peak]),
+        f"the last peak's heat arrives:\n{flux[peak]:.1f} W/m² after {hours[peak]:.1f} h",
+        (hours[peak], flux[peak]),
         xytext=(-20, -70),
         textcoords="offset points",
         ha="right",
@@ -272,32 +262,29 @@ def _flux(axes: Axes, pipe: BuriedPipe, cooling: Cooling, findings: Findings) ->
     axes.set_ylim(0.0, float(cooling.outer_flux.max()) * 1.12)
     _temper(axes, "Heat flux into the soil", "time after the pump stopped", "W/m² of casing")
     right = axes.twinx()
-    right.set_ylim(0.0, axes.get_ylim()[1] * around)
-    right.spines["top"].set_visible(False)
+    right.set_ylim(0.0, axes.get_ylim()[1] * 2.0 * math.pi * pipe.outer_radius)
     right.set_ylabel("W per metre of pipe", color=INK)
     right.tick_params(colors=INK, labelsize=9)
     right.spines["right"].set_color(FAINT)
+    for side in ("top", "left", "bottom"):
+        right.spines[side].set_visible(False)
     axes.legend(loc="lower left", fontsize=8.5, frameon=False, labelcolor=INK)
 
 
 def _decay(axes: Axes, cooling: Cooling, findings: Findings) -> None:
     """Coefficients of every snapshot over time against exp(-lambda t), each relative to its start."""
     hours = cooling.times / HOUR
+    fine = np.geomspace(hours[1], hours[-1], 300)
     for n in range(min(SHOWN_MODES, len(findings.modes))):
         share = np.abs(findings.coefficients[:, n] / findings.coefficients[0, n])
         seen = (share > DECAY_FLOOR) & (hours > 0.0)
-        fine = np.geomspace(hours[1], hours[-1], 300)
         law = np.exp(-findings.eigenvalues[n] * fine * HOUR)
         axes.plot(fine, law, color=MODE_COLOURS[n], lw=1.5)
-        axes.plot(
-            hours[seen], share[seen], "o", ms=3.6, mfc="white", mec=MODE_COLOURS[n], mew=0.9, label=f"n = {n}"
-        )
-    axes.set_xscale("log")
+        axes.plot(hours[seen], share[seen], **_dots(MODE_COLOURS[n]), label=f"n = {n}")
     axes.set_yscale("log")
-    axes.set_xticks((1 / 60, 0.1, 1.0, 10.0, 72.0), ["1 min", "6 min", "1 h", "10 h", "72 h"])
-    axes.set_xlim(hours[1] * 0.9, hours[-1] * 1.1)
+    _time_axis(axes, hours)
     axes.set_ylim(DECAY_FLOOR, 2.0)
     _temper(axes, "Each mode decays at its own rate", "time after the pump stopped", "|cₙ(t) / cₙ(0)|")
     axes.plot([], [], color=FAINT, lw=1.5, label="exp(−λₙ t)")
-    axes.plot([], [], "o", ms=3.6, mfc="white", mec=FAINT, label="projected")
+    axes.plot([], [], **_dots(FAINT), label="projected")
     axes.legend(loc="lower left", fontsize=8.5, frameon=False, labelcolor=INK)
