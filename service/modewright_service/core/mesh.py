@@ -8,12 +8,14 @@ Mathematical Functions, 1964, eqs. 9.3.1 and 10.1.47); variable coefficients nee
 
 from __future__ import annotations
 
+from typing import Final
+
 import numpy as np
 from numpy.typing import NDArray
 
 from modewright_service.core.approximation import CoefficientMesh, restrict
 
-__all__ = ["bisect_elements", "count_phase", "fundamental", "refine_for", "top_for_phase"]
+__all__ = ["bisect_elements", "choose_degree", "fundamental", "refine_for", "top_for_phase"]
 
 Array = NDArray[np.float64]
 
@@ -36,16 +38,11 @@ def fundamental(mesh: CoefficientMesh) -> float:
     return (np.pi / travel) ** 2 if travel > 0.0 else 0.0
 
 
-def count_phase(mesh: CoefficientMesh, lam: float) -> float:
-    """Theta = int sqrt((lambda w - q)+ / p) dx over the domain; Theta / pi is about the count below
-    lambda.
-    """
-    p, q, w, dx = _sampled(mesh)
-    return float((np.sqrt(np.maximum(lam * w - q, 0.0) / p) * dx).sum())
-
-
 def top_for_phase(mesh: CoefficientMesh, phase: float, scale: float) -> float:
-    """The lambda at which :func:`count_phase` reaches `phase`."""
+    """The lambda at which int sqrt((lambda w - q)+ / p) dx reaches `phase`.
+
+    Divided by pi, that integral is about the number of eigenvalues below lambda.
+    """
     p, q, w, dx = _sampled(mesh)
 
     def total(lam: float) -> float:
@@ -65,6 +62,37 @@ def top_for_phase(mesh: CoefficientMesh, phase: float, scale: float) -> float:
     return high
 
 
+# Degrees to choose from and the radians an element of that degree may hold: half as many terms again as
+# constant coefficients would need, the reserve being for variable ones.
+DEGREES: Final = ((32, 20.0), (24, 13.0), (16, 6.0), (10, 1.5))
+
+
+def choose_degree(mesh: CoefficientMesh, low: float, top: float) -> tuple[int, float]:
+    """(degree, phase): the pair of least cost, elements times k + 8, for all lambda in (low, top).
+
+    Few long layers want high degrees, thousands of thin ones low degrees. Where the coefficients themselves
+    need a high degree, so do the modes.
+    """
+    orders = mesh.p.shape[1] - 1
+    per_element = _phases(mesh, low, top, _POINTS)
+    best, least = DEGREES[0], np.inf
+    for degree, phase in DEGREES:
+        if degree < min(orders + 6, DEGREES[0][0]):
+            continue
+        cost = float(np.maximum(1.0, np.ceil(per_element / phase)).sum()) * (degree + 8)
+        if cost < least:
+            best, least = (degree, phase), cost
+    return best
+
+
+def _phases(mesh: CoefficientMesh, low: float, top: float, points: int) -> Array:
+    """(E,) radians of each element, the larger of what lambda = low and top give."""
+    p, q, w, dx = _sampled(mesh, points)
+    density = np.sqrt(np.maximum(np.abs(top * w - q), np.abs(low * w - q)) / p)
+    result: Array = (density * dx).sum(axis=1)
+    return result
+
+
 def refine_for(
     mesh: CoefficientMesh, low: float, top: float, phase: float, least: int, most: int
 ) -> CoefficientMesh:
@@ -73,9 +101,7 @@ def refine_for(
     least: elements wanted at least. most: where more would be needed, the phase allowed grows instead.
     """
     points = 32
-    p, q, w, dx = _sampled(mesh, points)
-    density = np.sqrt(np.maximum(np.abs(top * w - q), np.abs(low * w - q)) / p)
-    per_element = (density * dx).sum(axis=1)
+    per_element = _phases(mesh, low, top, points)
     allowed = phase
     parts = np.maximum(1, np.ceil(per_element / allowed)).astype(np.int64)
     while parts.sum() > max(most, mesh.edges.size - 1):

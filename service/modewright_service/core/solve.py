@@ -24,7 +24,13 @@ from modewright_service.core.condensed import Chain, build_chain, count_below, e
 from modewright_service.core.digest import ALGORITHM_VERSION, basis_key, problem_digest
 from modewright_service.core.elements import build_elements
 from modewright_service.core.errors import NotConverged, Reason, SpectrumExhausted
-from modewright_service.core.mesh import bisect_elements, fundamental, refine_for, top_for_phase
+from modewright_service.core.mesh import (
+    bisect_elements,
+    choose_degree,
+    fundamental,
+    refine_for,
+    top_for_phase,
+)
 from modewright_service.core.modes import FluxDefect, Modes, flux_defects, interior_zeros, make_modes
 from modewright_service.core.problem import EndTerm, Problem, Resolved, resolve, validate
 from modewright_service.core.spectrum import floor_below, lowest
@@ -38,12 +44,12 @@ Array = NDArray[np.float64]
 class SolveOptions:
     """How the discretisation is chosen; the defaults serve every tolerance rung.
 
-    degree: of the polynomials on each element, at least 2.
+    degree: of the polynomials on each element, at least 2; 0 chooses it, and the phase, by cost.
     phase: radians of the highest mode that an element may hold.
     max_elements: refinement stops there. passes: halvings after the first solve.
     """
 
-    degree: int = 32
+    degree: int = 0
     phase: float = 20.0
     max_elements: int = 20_000
     passes: int = 8
@@ -109,10 +115,11 @@ def solve(
             if not marked.any() or elements + int(marked.sum()) > chosen.max_elements:
                 break
             mesh = bisect_elements(result.mesh, marked)
-            chain = build_chain(build_elements(mesh, chosen.degree), resolved)
+            degree = result.chain.elements.reference.degree
+            chain = build_chain(build_elements(mesh, degree), resolved)
             top = _top_of(chain, wanted, top)
         poll()
-        result = _one_pass(chain, resolved, count, wanted, top, scale, chosen.degree, poll)
+        result = _one_pass(chain, resolved, count, wanted, top, scale, poll)
         if attempt == chosen.passes:
             break
     assert result is not None
@@ -136,15 +143,18 @@ def _resolve_top(
 ) -> tuple[Chain, float]:
     """A chain that resolves a lambda below which at least `wanted` eigenvalues lie, and that lambda."""
     phase = (wanted + 1.0) * np.pi
-    # unknowns at least half as many again as modes, whatever the phase says
-    least = int(np.ceil(1.5 * (wanted + 2) / max(1, chosen.degree - 1)))
     found = 0
     for _ in range(60):
         poll()
         top = top_for_phase(coefficients, phase, scale)
         low = min(-scale, top_for_phase(coefficients, 1e-6, scale))
-        mesh = refine_for(coefficients, low, top, chosen.phase, least, chosen.max_elements)
-        chain = build_chain(build_elements(mesh, chosen.degree), resolved)
+        degree, radians = (
+            (chosen.degree, chosen.phase) if chosen.degree else choose_degree(coefficients, low, top)
+        )
+        # unknowns at least half as many again as modes, whatever the phase says
+        least = int(np.ceil(1.5 * (wanted + 2) / (degree - 1)))
+        mesh = refine_for(coefficients, low, top, radians, least, chosen.max_elements)
+        chain = build_chain(build_elements(mesh, degree), resolved)
         found = int(count_below(chain, np.array([top]))[0])
         if found >= wanted:
             return chain, top
@@ -173,7 +183,6 @@ def _one_pass(
     wanted: int,
     top: float,
     scale: float,
-    degree: int,
     poll: Callable[[], None],
 ) -> _Pass:
     floor = floor_below(chain, scale)
@@ -183,7 +192,7 @@ def _one_pass(
     modes = make_modes(chain, separate(chain, values, eigenvectors(chain, values), scale))
     poll()
     defect = flux_defects(chain, values, modes)
-    mesh = chain.elements.mesh
+    mesh, degree = chain.elements.mesh, chain.elements.reference.degree
     bounds = bound(values, count, defect, mesh, resolved, degree, scale, poll)
     return _Pass(mesh, chain, values, modes, defect, bounds)
 
