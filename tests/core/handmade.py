@@ -13,6 +13,7 @@ from scipy.special import j0, j1, y0, y1
 
 from modewright.pieces import legendre_vandermonde
 from modewright.record import EndInfo, Record
+from modewright_service.core.quadrature import gauss_legendre
 
 Function = Callable[[Any], Any]
 
@@ -21,7 +22,7 @@ DIRICHLET, NEUMANN = EndInfo("dirichlet"), EndInfo("neumann")
 
 def legendre_series(function: Function, edges: np.ndarray, degree: int) -> np.ndarray:
     """(..., E, degree+1) coefficients of a function of x (P,) -> (..., P) on each element."""
-    t, weight = np.polynomial.legendre.leggauss(degree + 20)
+    t, weight = gauss_legendre(degree + 20)
     x = edges[:-1, None] + (edges[1:] - edges[:-1])[:, None] * (1 + t) / 2
     values = function(x.ravel()).reshape(-1, *x.shape)
     factor = (2 * np.arange(degree + 1) + 1) / 2
@@ -109,7 +110,9 @@ def annulus_zeros(count: int) -> np.ndarray:
     def cross(k: float) -> float:
         return float(j0(k) * y0(2 * k) - y0(k) * j0(2 * k))
 
-    return np.array([brentq(cross, np.pi * n - 0.3, np.pi * n + 0.3, xtol=1e-15) for n in range(1, count + 1)])
+    return np.array(
+        [brentq(cross, np.pi * n - 0.3, np.pi * n + 0.3, xtol=1e-15) for n in range(1, count + 1)]
+    )
 
 
 def logarithmic_sines(count: int = 10) -> Record:
@@ -150,7 +153,10 @@ def contact(resistance: float = 0.5, pairs: int = 5) -> Record:
     half = np.array(
         [
             brentq(
-                lambda h: np.cos(h) - resistance * h * np.sin(h), np.pi * j + 1e-9, np.pi * (j + 1), xtol=1e-15
+                lambda h: np.cos(h) - resistance * h * np.sin(h),
+                np.pi * j + 1e-9,
+                np.pi * (j + 1),
+                xtol=1e-15,
             )
             for j in range(pairs)
         ]
@@ -180,9 +186,7 @@ def point_mass(mass: float = 0.4, count: int = 6) -> Record:
     """A string held at both ends with a mass in its middle; 2 cos(k/2) = m k sin(k/2), or k/2 a multiple of pi."""
     half = np.array(
         [
-            brentq(
-                lambda h: np.cos(h) - mass * h * np.sin(h), np.pi * j + 1e-9, np.pi * (j + 1), xtol=1e-15
-            )
+            brentq(lambda h: np.cos(h) - mass * h * np.sin(h), np.pi * j + 1e-9, np.pi * (j + 1), xtol=1e-15)
             for j in range(count)
         ]
     )
@@ -196,6 +200,4 @@ def point_mass(mass: float = 0.4, count: int = 6) -> Record:
         mirrored = np.where(is_still[:, None], -1.0, 1.0) * np.sin(np.outer(k, 1 - x))
         return amplitude[:, None] * np.where(x < 0.5, np.sin(np.outer(k, x)), mirrored)
 
-    return record_of(
-        modes, k**2, np.array([0.0, 0.25, 0.5, 1.0]), joints=np.array([[0.5, 0.0, 0.0, mass]])
-    )
+    return record_of(modes, k**2, np.array([0.0, 0.25, 0.5, 1.0]), joints=np.array([[0.5, 0.0, 0.0, mass]]))
