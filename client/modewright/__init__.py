@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     from modewright.basis import Basis as Basis
     from modewright.basis import Projection as Projection
     from modewright.basis import load_basis as load_basis
+    from modewright.channels import Tls as Tls
     from modewright.client import Check as Check
     from modewright.client import Progress as Progress
     from modewright.client import Service as Service
@@ -62,6 +63,7 @@ if TYPE_CHECKING:
 
 _HOMES = {
     "basis": ("Basis", "Projection", "load_basis"),
+    "channels": ("Tls",),
     "client": ("Check", "Progress", "Service", "connect"),
     "errors": (
         "BasisNotFound",

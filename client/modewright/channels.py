@@ -140,28 +140,40 @@ def handshake_failure(target: Target, timeout: float) -> str | None:
     """Why TLS with the target is refused, or None when it is not (or the target cannot be asked this way).
 
     gRPC reports a wrong issuer, a wrong name and a missing client certificate as UNAVAILABLE, like a service
-    that is not there. One handshake through the standard library's TLS tells them apart. It goes on to read
-    the answer to HTTP/2's opening, since with TLS 1.3 a missing client certificate only shows there.
+    that is not there. A handshake through the standard library's TLS tells them apart. It goes on to read
+    the answer to HTTP/2's opening, since with TLS 1.3 a missing client certificate only shows there: as an
+    alert, or as a connection closed before the first byte. The latter counts when it happens twice, as a
+    server may stop just then.
     """
     tls, place = target.tls, _host_and_port(target.address)
     if tls is None or place is None:
         return None
     try:
-        context = ssl.create_default_context(cafile=tls.ca)
-        context.set_alpn_protocols(["h2"])
-        if tls.certificate is not None:
-            context.load_cert_chain(tls.certificate, tls.key)
-        with (
-            socket.create_connection(place, timeout=min(timeout, 5.0)) as plain,
-            context.wrap_socket(plain, server_hostname=tls.server_name or place[0]) as secured,
-        ):
-            secured.sendall(_HTTP2_OPENING)
-            secured.recv(1)
+        if any(_opening_is_answered(tls, place, min(timeout / 2, 5.0)) for _ in range(2)):
+            return None
     except ssl.SSLError as error:
         return str(error)
     except OSError:
         return None
-    return None
+    given = "without a client certificate" if tls.certificate is None else f"with {tls.certificate}"
+    return f"the service closes every connection right after the handshake, {given}"
+
+
+def _opening_is_answered(tls: Tls, place: tuple[str, int], timeout: float) -> bool:
+    """Whether anything comes back over TLS. Raises ssl.SSLError if refused, OSError without a peer."""
+    context = ssl.create_default_context(cafile=tls.ca)
+    context.set_alpn_protocols(["h2"])
+    if tls.certificate is not None:
+        context.load_cert_chain(tls.certificate, tls.key)
+    with (
+        socket.create_connection(place, timeout=timeout) as plain,
+        context.wrap_socket(plain, server_hostname=tls.server_name or place[0]) as secured,
+    ):
+        try:
+            secured.sendall(_HTTP2_OPENING)
+            return bool(secured.recv(1))
+        except ConnectionError:
+            return False
 
 
 def _host_and_port(address: str) -> tuple[str, int] | None:

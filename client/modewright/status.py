@@ -10,6 +10,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterable
 
 import grpc
+from google.protobuf.message import DecodeError
 from google.rpc import error_details_pb2, status_pb2
 
 from modewright import errors
@@ -111,8 +112,8 @@ def _details(trailing: Iterable[tuple[str, str | bytes]] | None) -> status_pb2.S
         if key == _DETAILS_KEY and isinstance(value, bytes):
             try:
                 return status_pb2.Status.FromString(value)
-            except ValueError:
-                # What protobuf's DecodeError derives from. A proxy's garbage is no reason to hide the code.
+            except DecodeError:
+                # A proxy's garbage is no reason to hide the code.
                 return None
     return None
 
@@ -140,7 +141,8 @@ def _unpack(status: status_pb2.Status) -> tuple[str, dict[str, str], list[errors
 def _without(message: str, violations: Iterable[errors.Violation]) -> str:
     """The status text without the violations, which it repeats in the contract's field names."""
     for violation in violations:
-        message = message.replace(str(violation), "", 1)
+        for text in (str(violation), f"{violation.field}: {violation.message}"):
+            message = message.replace(text, "", 1)
     return message.strip("; ")
 
 

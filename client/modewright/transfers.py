@@ -265,10 +265,11 @@ _PROJECT_NAMES = {
     "sampled.values": "values",
     "sampled.mesh.points.x": "x",
     "sampled.mesh.cells.edges": "edges",
+    "sampled.mesh.cells.measure": "measure",
+    "sampled.mesh.points.interpolation": "interpolation",
+    "sampled.mesh.cells.reconstruction": "interpolation",
     "sampled.mesh": "x",
-    "mesh.points.x": "x",
-    "mesh.cells.edges": "edges",
-    "expression": "values",
+    "sampled.axis": "axis",
 }
 
 
