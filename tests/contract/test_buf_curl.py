@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import base64
 import json
 import math
 import os
@@ -14,6 +15,7 @@ from typing import Any
 
 import grpc
 import pytest
+from google.rpc.error_details_pb2 import BadRequest, ErrorInfo
 from grpc_health.v1 import health_pb2, health_pb2_grpc
 
 from tests.peers import program
@@ -49,6 +51,11 @@ def socket() -> Iterator[Path]:
             assert process.wait(timeout=60) == 0
 
 
+def _unpadded(text: str) -> bytes:
+    """Base64 as in JSON error details, which leave the padding out."""
+    return base64.b64decode(text + "=" * (-len(text) % 4))
+
+
 def _curl(socket: Path, method: str, request: dict[str, Any]) -> subprocess.CompletedProcess[str]:
     command = [program("buf"), "curl", "--protocol", "grpc", "--http2-prior-knowledge"]
     command += ["--unix-socket", str(socket), "--data", json.dumps(request), f"http://localhost/{method}"]
@@ -82,11 +89,13 @@ def test_a_refusal_names_reason_field_and_number(socket: Path) -> None:
     assert refused.returncode != 0
     error = json.loads(refused.stderr)
     assert error["code"] == "invalid_argument"
-    details = {entry["type"]: entry["debug"] for entry in error["details"]}
-    assert details["google.rpc.ErrorInfo"]["reason"] == "NEGATIVE_COEFFICIENT"
-    violation = details["google.rpc.BadRequest"]["fieldViolations"][0]
-    assert violation["field"] == "layers[0].p"
-    assert "-2.5" in violation["description"]
+    details = {entry["type"]: _unpadded(entry["value"]) for entry in error["details"]}
+    info = ErrorInfo.FromString(details["google.rpc.ErrorInfo"])
+    assert (info.domain, info.reason) == ("modewright", "NEGATIVE_COEFFICIENT")
+    (violation,) = BadRequest.FromString(details["google.rpc.BadRequest"]).field_violations
+    assert violation.field == "layers[0].p"
+    assert "-2.5" in violation.description
+    assert float(info.metadata["number_0"]) == -2.5
 
 
 def test_a_draft_call_is_unimplemented(socket: Path) -> None:
