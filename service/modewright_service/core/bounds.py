@@ -22,7 +22,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from modewright_service.core.approximation import CoefficientMesh
+from modewright_service.core.approximation import CoefficientMesh, ranges
 from modewright_service.core.comparison import Comparison, build_comparison
 from modewright_service.core.modes import FluxDefect
 from modewright_service.core.problem import Resolved
@@ -60,17 +60,36 @@ class Bounds:
 
 
 def coefficient_terms(mesh: CoefficientMesh, lam: Array) -> Array:
-    """(T,) how far lambda may move when p, q, w are replaced by their polynomials on `mesh`.
+    """(T,) how far lambda may move when the polynomials on `mesh` are replaced by p, q, w as written.
 
-    With relative errors d_p, d_w and q off by d_q: |change| <= (d_p + d_w) |lambda| + 2 max(d_q / w), to
-    first order in errors that are near rounding; d_p acts on the p-energy, bounded by |lambda| + max(-q/w).
+    With relative errors d_p and d_w, (d_p / (1 - d_p) + d_w) (|lambda| + depth), depth = max(-q / w) bounding
+    the p-energy by lambda + depth. q off by d_q, and w off by an absolute d_w where no relative bound exists,
+    act through int |d| u^2: at most max(d / w), or int |d| dx sup u^2 with sup u^2 <= 2 / int w + 2 int 1/p
+    (lambda + depth) for a normalised u (its w-mean plus the energy of the way from there), whichever is less.
     """
-    p_error, w_error = float(np.max(mesh.p_error)), float(np.max(mesh.w_error))
-    mean_w = np.maximum(mesh.w[:, 0], np.finfo(float).tiny)
-    q_term = float(np.max(mesh.q_error / mean_w))
-    lowest_q = mesh.q[:, 0] - np.abs(mesh.q[:, 1:]).sum(axis=1)
-    depth = float(np.max(np.maximum(-lowest_q, 0.0) / mean_w))
-    return (p_error + w_error) * (np.abs(lam) + depth) * (1.0 + p_error + w_error) + 2.0 * q_term
+    t, weight = np.polynomial.legendre.leggauss(8)
+    vander = np.polynomial.legendre.legvander(t, mesh.p.shape[1] - 1).T
+    lengths = np.diff(mesh.edges)
+    dx = 0.5 * lengths[:, None] * weight
+    total_w = float(((mesh.w @ vander) * dx).sum())
+    path = float((dx / (mesh.p @ vander)).sum())
+    part = ranges(mesh, 1)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        depths = np.where(part.q_lower < 0.0, -part.q_lower / part.w_lower, 0.0)
+        direct = np.where(mesh.q_error > 0.0, mesh.q_error / part.w_lower, 0.0)
+    depth = float(depths.max())
+    if not np.isfinite(depth):
+        # w vanishes where q < 0: the deepest q against the mean weight stands in
+        depth = float(-part.q_lower.min()) * float(lengths.sum()) / total_w
+    energy = np.abs(lam) + depth
+    peak = 2.0 / total_w + 2.0 * path * energy
+    bounded = np.isfinite(mesh.w_error)
+    relative = float(mesh.p_error.max()) + float(mesh.w_error[bounded].max(initial=0.0))
+    relative /= 1.0 - min(0.5, float(mesh.p_error.max()))
+    q_term = np.minimum(2.0 * float(direct.max()), float((mesh.q_error * lengths).sum()) * peak)
+    w_term = np.abs(lam) * float((mesh.w_absolute * lengths)[~bounded].sum()) * peak
+    result: Array = relative * energy + q_term + w_term
+    return result
 
 
 def bound(

@@ -35,6 +35,7 @@ __all__ = [
     "Evaluation",
     "Links",
     "Vectors",
+    "away_from_zero",
     "build_chain",
     "condense",
     "count_below",
@@ -216,7 +217,7 @@ def condense(chain: Chain, lam: Array, with_mass: bool) -> Links:
     return Links(g, alpha, gamma, a1, a2, delta, theta, m1, m2, m00, m01, m11, below)
 
 
-def _away_from_zero(value: Array, scale: Array) -> Array:
+def away_from_zero(value: Array, scale: Array) -> Array:
     """An exact zero pivot becomes one of rounding size (as in Sturm counts of tridiagonal matrices)."""
     tiny = 1e-300 + 1e-18 * scale
     return np.where(np.abs(value) < tiny, tiny, value)
@@ -239,7 +240,7 @@ def sweep_left(chain: Chain, k: Links, lam: Array) -> tuple[Array, Array, IntArr
     for j in range(n):
         g, a1, a2, delta = k.g[j], k.a1[j], k.a2[j], k.delta[j]
         if j == 0 and chain.left_fixed:
-            det[0] = _away_from_zero(delta, np.ones_like(delta))
+            det[0] = away_from_zero(delta, np.ones_like(delta))
             x[1] = k.gamma[0] + g - a2 * a2 / det[0] + terms[1]
             count += det[0] < 0.0
             continue
@@ -247,7 +248,7 @@ def sweep_left(chain: Chain, k: Links, lam: Array) -> tuple[Array, Array, IntArr
         d = r + g
         a12 = a1 + a2
         scale = np.abs(x[j]) + np.abs(g)
-        det[j] = _away_from_zero(d * delta - a1 * a1, scale * np.abs(delta) + a1 * a1)
+        det[j] = away_from_zero(d * delta - a1 * a1, scale * np.abs(delta) + a1 * a1)
         x[j + 1] = k.gamma[j] + (g * (r * delta - a12 * a12) - a2 * a2 * r) / det[j] + terms[j + 1]
         count += np.where(det[j] < 0.0, 1, np.where(d < 0.0, 2, 0))
     if not chain.right_fixed:
@@ -264,14 +265,14 @@ def _sweep_right(chain: Chain, k: Links, lam: Array) -> tuple[Array, Array]:
     for j in range(n - 1, -1, -1):
         g, a1, a2, delta = k.g[j], k.a1[j], k.a2[j], k.delta[j]
         if j == n - 1 and chain.right_fixed:
-            det[j] = _away_from_zero(delta, np.ones_like(delta))
+            det[j] = away_from_zero(delta, np.ones_like(delta))
             y[j] = k.alpha[j] + g - a1 * a1 / det[j]
             continue
         r = y[j + 1] + terms[j + 1] + k.gamma[j]
         d = r + g
         a12 = a1 + a2
         scale = np.abs(r) + np.abs(g)
-        det[j] = _away_from_zero(d * delta - a2 * a2, scale * np.abs(delta) + a2 * a2)
+        det[j] = away_from_zero(d * delta - a2 * a2, scale * np.abs(delta) + a2 * a2)
         y[j] = k.alpha[j] + (g * (r * delta - a12 * a12) - a1 * a1 * r) / det[j]
     return y, det
 
