@@ -16,6 +16,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from modewright.pieces import legendre_vandermonde
 from modewright.record import Record
+from modewright_service.core import discs
 from modewright_service.core.approximation import approximate
 from modewright_service.core.errors import (
     CoreError,
@@ -23,12 +24,15 @@ from modewright_service.core.errors import (
     InvalidRequest,
     NotConverged,
     Reason,
+    Unsupported,
     Violation,
 )
+from modewright_service.core.evaluation import point_signs, run
 from modewright_service.core.expressions import parse
-from modewright_service.core.problem import Expression, Layer, Problem
+from modewright_service.core.problem import Constant, Expression, Layer, Problem
+from modewright_service.core.quadrature import gauss_legendre
 
-from .fields import Collected, Lumps, Poll, Projection, no_poll
+from .fields import LARGEST, Collected, Lumps, Poll, Projection, no_poll
 from .grid import Grid, build_grid
 
 __all__ = ["project_expression"]
@@ -37,6 +41,8 @@ Floats = NDArray[np.float64]
 
 # What the polynomials may be off by, as a share of the field's norm, before the projection is refused.
 _ADMITTED: Final = 1e-10
+# Samples of an expression on each element, to learn its size.
+_LOOKS: Final = 16
 
 
 @dataclass(frozen=True, eq=False)
@@ -87,23 +93,52 @@ def project_expression(
 
 
 def _approximated(record: Record, text: str, poll: Poll) -> tuple[_Polynomials, Floats]:
-    """The polynomials, and a bound of their error on each interval."""
+    """The polynomials, and a bound of their error on each interval.
+
+    The field takes the place of q in a problem whose lowest eigenvalue is about the field's size: beside
+    that the approximation counts what is small in q as small.
+    """
     bounds = record.layer_edges.tolist()
-    layers = tuple(
-        Layer(f"part {i}", bounds[i], bounds[i + 1], q=Expression(text)) for i in range(len(bounds) - 1)
-    )
     try:
-        parse(text)
+        length = bounds[-1] - bounds[0]
+        p = max(_size(record, text) * (length / math.pi) ** 2, 1e-250)
+        layers = tuple(
+            Layer(f"part {i}", bounds[i], bounds[i + 1], p=Constant(p), q=Expression(text))
+            for i in range(len(bounds) - 1)
+        )
         mesh = approximate(Problem(layers), poll=poll)
-    except InvalidProblem as error:
+    except (InvalidProblem, Unsupported) as error:
         raise _as_request(error) from None
+    size = np.abs(mesh.q).sum(axis=1)
+    good = (size <= LARGEST) & (mesh.q_error <= LARGEST)
+    if not good.all():
+        x = float(mesh.edges[np.argmin(good)])
+        message = f"the expression {text[:80]!r} has no finite value near x = {x!r}"
+        raise InvalidRequest.at(Reason.NOT_FINITE, "values", message, "inf", x=x)
     return _Polynomials(mesh.edges, mesh.q), mesh.q_error
+
+
+def _size(record: Record, text: str) -> float:
+    """The largest modulus of the expression that samples find; 1.0 where they find none."""
+    program = parse(text)
+    nodes, _ = gauss_legendre(_LOOKS)
+    left, right = record.edges[:-1, np.newaxis], record.edges[1:, np.newaxis]
+    points = discs.exact((((1.0 - nodes) * left + (1.0 + nodes) * right) / 2.0).astype(np.longdouble))
+    found = np.abs(run(program, points, signs=point_signs(program, points)).centre)
+    largest = float(np.max(found, where=found <= LARGEST, initial=0.0))
+    return largest if largest > 0.0 else 1.0
 
 
 def _as_request(error: CoreError) -> InvalidRequest:
     """The same complaint about the field `values` of a request."""
-    violations = [Violation("values", v.message, v.number, v.reason) for v in error.violations]
-    return InvalidRequest(error.reason, error.message, violations, error.metadata)
+    reason = Reason.NOT_FINITE if isinstance(error, Unsupported) else error.reason
+    violations = [
+        Violation(
+            "values", "the field" + v.message[1:] if v.message[:2] == "q " else v.message, v.number, reason
+        )
+        for v in error.violations
+    ]
+    return InvalidRequest(reason, error.message, violations, error.metadata)
 
 
 def _check_error(grid: Grid, errors: Floats, projection: Projection, text: str) -> None:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
-from typing import Any, Protocol
+from typing import Any, Final, Protocol
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -14,13 +14,25 @@ from modewright_service.core.errors import InvalidRequest, Reason
 
 from .grid import Grid, lump_mass
 
-__all__ = ["Collected", "Field", "Lumps", "Poll", "Projection", "check_finite", "no_poll", "numbers"]
+__all__ = [
+    "LARGEST",
+    "Collected",
+    "Field",
+    "Lumps",
+    "Poll",
+    "Projection",
+    "check_finite",
+    "no_poll",
+    "numbers",
+]
 
 Floats = NDArray[np.float64]
 Numbers = NDArray[Any]
 Poll = Callable[[], None]
 
 _SIDES = ("left", "right")
+# Squares and their sums stay clear of overflow.
+LARGEST: Final = 1e140
 
 
 def no_poll() -> None:
@@ -153,7 +165,12 @@ class Collected:
             )
         left, right = self._lumps.extrapolated
         return Projection(
-            self._coefficients.reshape(*self._batch, -1), captured, norm2, residual2, left, right
+            self._coefficients.reshape(*self._batch, self._coefficients.shape[1]),
+            captured,
+            norm2,
+            residual2,
+            left,
+            right,
         )
 
 
@@ -193,16 +210,21 @@ def numbers(values: ArrayLike, field: str) -> Numbers:
 
 
 def check_finite(block: Numbers, first: int, batch: tuple[int, ...], field: str) -> None:
-    """InvalidRequest, with its place, for a value that is not finite in rows `first`... of a batch."""
-    finite = np.isfinite(block)
-    if finite.all():
+    """InvalidRequest, with its place, for a value that is not finite in rows `first`... of a batch.
+
+    Values beyond LARGEST are refused as well.
+    """
+    with np.errstate(invalid="ignore"):
+        good = np.abs(block) <= LARGEST
+    if good.all():
         return
-    row, column = divmod(int(np.argmin(finite)), block.shape[1])
+    row, column = divmod(int(np.argmin(good)), block.shape[1])
+    value = block[row, column]
     place = [int(i) for i in np.unravel_index(first + row, batch)] if batch else []
     path = field + "".join(f"[{i}]" for i in [*place, column])
-    raise InvalidRequest.at(
-        Reason.NOT_FINITE, path, "not finite; gaps are not filled in", str(block[row, column])
-    )
+    if np.isfinite(value):
+        raise InvalidRequest.at(Reason.BAD_VALUES, path, f"larger than {LARGEST}", str(value))
+    raise InvalidRequest.at(Reason.NOT_FINITE, path, "not finite; gaps are not filled in", str(value))
 
 
 def _lump_values(
