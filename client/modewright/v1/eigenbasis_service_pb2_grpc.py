@@ -159,7 +159,7 @@ class EigenbasisServiceServicer(object):
 
     def FetchBasis(self, request, context):
         """Sends a basis as one file in parts. Fails with NOT_FOUND (BASIS_NOT_FOUND) if only an unknown key
-        is given, with OUT_OF_RANGE if offset lies beyond the file, and as Solve where a solve is needed.
+        is given, with INVALID_ARGUMENT if offset lies beyond the file, and as Solve where a solve is needed.
         """
         context.set_code(grpc.StatusCode.UNIMPLEMENTED)
         context.set_details('Method not implemented!')

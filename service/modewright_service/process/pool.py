@@ -163,8 +163,11 @@ class WorkerPool:
         for slot, worker in self._workers.items():
             if worker.ticket is not None and worker.ticket.order is order:
                 return Progress(computing=True, steps=self._board.steps(slot))
-        position = next((i for i, ticket in enumerate(self._waiting) if ticket.order is order), 0)
-        return Progress(computing=False, position=position)
+        for position, ticket in enumerate(self._waiting):
+            if ticket.order is order:
+                return Progress(computing=False, position=position)
+        # Computed; the record is being read.
+        return Progress(computing=True, steps=order.steps)
 
     async def close(self) -> None:
         """Stop solving: running and waiting solves fail with SHUTTING_DOWN, the processes end."""
@@ -356,10 +359,11 @@ class WorkerPool:
             if isinstance(message, frames.Finished):
                 Path(message.path).unlink(missing_ok=True)
         elif not ticket.future.done():
-            self._settle(ticket, message)
+            self._settle(ticket, worker.spawned.slot, message)
         self._dispatch()
 
-    def _settle(self, ticket: _Ticket, message: frames.FromWorker) -> None:
+    def _settle(self, ticket: _Ticket, slot: int, message: frames.FromWorker) -> None:
+        ticket.order.steps = self._board.steps(slot)
         match message:
             case frames.Finished():
                 try:

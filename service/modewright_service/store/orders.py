@@ -22,6 +22,7 @@ class Order:
     basis_key: what it will be known by. count, rtol: rungs of the ladder, not what a user typed.
     deadline: monotonic seconds at which the last caller interested in it gives up; may be moved while it runs
         (then call the solver's `extend`).
+    steps: life signs of its solver, set when it has ended.
     """
 
     basis_key: str
@@ -29,6 +30,7 @@ class Order:
     count: int
     rtol: float
     deadline: float = math.inf
+    steps: int = 0
 
 
 @dataclass(frozen=True)
