@@ -30,17 +30,21 @@ POINTS_PER_LAYER = 60
 class Findings:
     """The modal answer; T snapshots, N modes, P points. Temperatures are above the soil's.
 
-    ``coefficients`` (T, N) in the basis's own normalisation. ``captured`` (T,) share of the squared norm
-    that the modes hold, ``residual`` (T,) norm of what is left, ``norm`` (T,). ``points`` (P,) m, interfaces
-    twice, the inner side first; ``modes`` (N, P); ``water_modes`` (N,) the water's own value in each mode.
-    ``fields`` (T, P) K, ``water`` (T,) K and ``outer_flux`` (T,) W/m2 are reconstructed; ``foretold_water``
-    and ``foretold_flux`` (T,) come from the first snapshot alone.
+    ``eigenvalues``, ``lower``, ``upper`` (N,) 1/s; ``zeros`` (N,) counted inside; ``confirmed`` (N,) by a
+    comparison problem. ``coefficients`` (T, N) in the basis's own normalisation. ``captured`` (T,) share of
+    the squared norm that the modes hold, ``residual`` (T,) norm of what is left, ``norm`` (T,). ``points``
+    (P,) m, interfaces twice, the inner side first; ``modes`` (N, P); ``water_modes`` (N,) the water's own
+    value in each mode. ``fields`` (T, P) K, ``water`` (T,) K and ``outer_flux`` (T,) W/m2 are reconstructed;
+    ``foretold_water`` and ``foretold_flux`` (T,) come from the first snapshot alone.
     """
 
     eigenvalues: Floats
     lower: Floats
     upper: Floats
+    zeros: npt.NDArray[np.int64]
+    confirmed: npt.NDArray[np.bool_]
     key: str
+    solve_seconds: float
     coefficients: Floats
     captured: Floats
     residual: Floats
@@ -118,7 +122,10 @@ def examine(basis: modewright.Basis, pipe: BuriedPipe, cooling: Cooling) -> Find
         eigenvalues=basis.eigenvalues,
         lower=basis.lower,
         upper=basis.upper,
+        zeros=basis.zeros,
+        confirmed=basis.confirmed,
         key=basis.key,
+        solve_seconds=basis.solve_seconds,
         coefficients=coefficients,
         captured=np.asarray(projection.captured),
         residual=np.asarray(projection.residual),

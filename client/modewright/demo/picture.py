@@ -30,13 +30,14 @@ PROFILE_HOURS = (0.0, 6.0, 24.0, 48.0, 72.0)
 SHOWN_MODES = 5
 INK = "#22303c"
 FAINT = "#8795a1"
+HAZE = "#c3ccd4"
 # Shades of the layers from the water outwards, quiet enough to lie under lines.
 SHADES = ("#c9d3dc", "#fbf1d5", "#dcd7d2")
 WATER_SHADE = "#dceaf5"
 # Width of the strip that stands for the water left of the wall, mm.
 WATER_STRIP = 3.5
 MODE_COLOURS = ("#8c2d04", "#d9601a", "#2b7a78", "#3b5b92", "#7a4fa3")
-# Below this share of its start a coefficient is the finite-volume program's own error.
+# Lowest share that the picture shows.
 DECAY_FLOOR = 1e-6
 
 
@@ -215,7 +216,7 @@ def _profiles(axes: Axes, pipe: BuriedPipe, cooling: Cooling, findings: Findings
         axes.plot([inner - WATER_STRIP, inner], [water, water], color=shade, lw=1.6)
         axes.plot(findings.points * 1e3, findings.fields[i] + soil, color=shade, lw=1.6)
         axes.plot(inner - WATER_STRIP / 2.0, cooling.water[i] + soil, **_dots(shade))
-        axes.plot(centres[::3], cooling.cells[i, ::3] + soil, **_dots(shade))
+        axes.plot(centres[::6], cooling.cells[i, ::6] + soil, **_dots(shade))
         axes.annotate(
             "0 h" if hour == 0.0 else duration(cooling.times[i]),
             (inner, water),
@@ -226,7 +227,7 @@ def _profiles(axes: Axes, pipe: BuriedPipe, cooling: Cooling, findings: Findings
             color=shade,
         )
     axes.plot([], [], color=INK, lw=1.6, label="reconstructed from the modes")
-    axes.plot([], [], **_dots(INK), label="finite volumes (every third cell)")
+    axes.plot([], [], **_dots(INK), label="finite volumes (every sixth cell)")
     axes.axhline(soil, color=FAINT, lw=0.8, ls=":")
     axes.annotate(
         "undisturbed soil",
@@ -277,14 +278,17 @@ def _decay(axes: Axes, cooling: Cooling, findings: Findings) -> None:
     fine = np.geomspace(hours[1], hours[-1], 300)
     for n in range(min(SHOWN_MODES, len(findings.modes))):
         share = np.abs(findings.coefficients[:, n] / findings.coefficients[0, n])
+        law = np.exp(-findings.eigenvalues[n] * cooling.times)
+        apart = np.abs(share - law) > 0.1 * law
         seen = (share > DECAY_FLOOR) & (hours > 0.0)
-        law = np.exp(-findings.eigenvalues[n] * fine * HOUR)
-        axes.plot(fine, law, color=MODE_COLOURS[n], lw=1.5)
-        axes.plot(hours[seen], share[seen], **_dots(MODE_COLOURS[n]), label=f"n = {n}")
+        axes.plot(fine, np.exp(-findings.eigenvalues[n] * fine * HOUR), color=MODE_COLOURS[n], lw=1.5)
+        axes.plot(hours[seen & apart], share[seen & apart], **_dots(HAZE, size=2.0))
+        axes.plot(hours[seen & ~apart], share[seen & ~apart], **_dots(MODE_COLOURS[n]), label=f"n = {n}")
     axes.set_yscale("log")
     _time_axis(axes, hours)
     axes.set_ylim(DECAY_FLOOR, 2.0)
     _temper(axes, "Each mode decays at its own rate", "time after the pump stopped", "|cₙ(t) / cₙ(0)|")
     axes.plot([], [], color=FAINT, lw=1.5, label="exp(−λₙ t)")
     axes.plot([], [], **_dots(FAINT), label="projected")
+    axes.plot([], [], **_dots(HAZE, size=2.0), label="finite-volume error")
     axes.legend(loc="lower left", fontsize=8.5, frameon=False, labelcolor=INK)
