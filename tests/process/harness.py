@@ -37,7 +37,7 @@ class Running:
 
     def __init__(self, folder: Path, **settings: Any) -> None:
         self.address = f"unix:{folder / 'service.sock'}"
-        given = {"workers": 1, "drain_seconds": 0.0, "grace_seconds": 5.0, **settings}
+        given = {"workers": 1, "worker_nice": 0, "drain_seconds": 0.0, "grace_seconds": 5.0, **settings}
         self.settings = Settings(listen=self.address, spool=folder / "spool", **given)
         self._loop = asyncio.new_event_loop()
         self._thread = threading.Thread(target=self._loop.run_forever)
@@ -84,8 +84,16 @@ class Child:
     def __init__(self, folder: Path, *arguments: str) -> None:
         folder.mkdir(parents=True, exist_ok=True)
         self.life, theirs = socket.socketpair()
-        command = [sys.executable, "-m", "modewright_service", "--embedded", "--ready-fd", str(theirs.fileno())]
-        command += ["--socket", str(folder / "s.sock"), "--workers", "1", "--spool", str(folder / "spool")]
+        command = [
+            sys.executable,
+            "-m",
+            "modewright_service",
+            "--embedded",
+            "--ready-fd",
+            str(theirs.fileno()),
+        ]
+        command += ["--socket", str(folder / "s.sock"), "--spool", str(folder / "spool")]
+        command += ["--workers", "1", "--worker-nice", "0"]
         with theirs, (folder / "log").open("wb") as log:
             self.process = subprocess.Popen(
                 [*command, *arguments], pass_fds=[theirs.fileno()], stdout=log, stderr=log
@@ -158,10 +166,10 @@ def solve_request(w: float = 1.0, count: int = 8) -> solve_pb2.SolveRequest:
     return solve_pb2.SolveRequest(problem=unit_problem(w), specification=modes(count))
 
 
-# Takes seconds in a worker: long enough to be interrupted, short enough to be finished.
-HEAVY = 1024
+# Takes about a second in a worker: long enough to be interrupted, short enough to be finished.
+HEAVY = 512
 
 
 def heavy_request(w: float = 1.0) -> solve_pb2.SolveRequest:
-    """A solve of seconds; another `w` is another problem."""
+    """A solve of about a second; another `w` is another problem."""
     return solve_request(w, HEAVY)

@@ -56,7 +56,7 @@ def refused(call: Callable[[], Any]) -> tuple[grpc.StatusCode, str, dict[str, st
     """Code, reason and metadata of a call that must fail."""
     with pytest.raises(grpc.RpcError) as caught:
         call()
-    trailers = {key: value for key, value in caught.value.trailing_metadata()}
+    trailers = dict(caught.value.trailing_metadata())
     status = Status.FromString(trailers["grpc-status-details-bin"])
     info = ErrorInfo()
     assert status.details[0].Unpack(info)
@@ -244,9 +244,7 @@ def test_references_that_name_no_basis(live: Running, basis: basis_pb2.BasisRefe
 
 
 def sampled(values: np.ndarray, x: np.ndarray, **options: Any) -> pb.SampledField:
-    return pb.SampledField(
-        values=encode(values), mesh=pb.Mesh(points=pb.PointMesh(x=encode(x))), **options
-    )
+    return pb.SampledField(values=encode(values), mesh=pb.Mesh(points=pb.PointMesh(x=encode(x))), **options)
 
 
 X = np.linspace(0.0, 1.0, 401)
@@ -303,14 +301,10 @@ def test_fewer_modes_are_the_first_ones(live: Running, solved: solve_pb2.SolveRe
 def test_cells_expressions_and_complex_fields(live: Running, solved: solve_pb2.SolveResponse) -> None:
     edges = X
     averages = np.diff(X**2 / 2 - X**3 / 3) / np.diff(X)
-    cells = pb.SampledField(
-        values=encode(averages), mesh=pb.Mesh(cells=pb.CellMesh(edges=encode(edges)))
-    )
+    cells = pb.SampledField(values=encode(averages), mesh=pb.Mesh(cells=pb.CellMesh(edges=encode(edges))))
     by_cells = live.stub.Project(pb.ProjectRequest(basis=by_key(solved), sampled=cells))
     formula = live.stub.Project(pb.ProjectRequest(basis=by_key(solved), expression="x*(1 - x)"))
-    turned = live.stub.Project(
-        pb.ProjectRequest(basis=by_key(solved), sampled=sampled(PARABOLA * 1j, X))
-    )
+    turned = live.stub.Project(pb.ProjectRequest(basis=by_key(solved), sampled=sampled(PARABOLA * 1j, X)))
     exact = decode(formula.coefficients, "c")
     assert exact.shape == (12,)
     np.testing.assert_allclose(decode(by_cells.coefficients, "c"), exact, atol=1e-10)
@@ -342,9 +336,7 @@ def test_reconstruction_agrees_with_the_record(
 
 def test_lumps_are_used_flagged_and_reconstructed(live: Running) -> None:
     problem = unit_problem()
-    problem.left.CopyFrom(
-        problem_pb2.EndCondition(kind=problem_pb2.END_KIND_LUMP, mass=2.0, resistance=0.5)
-    )
+    problem.left.CopyFrom(problem_pb2.EndCondition(kind=problem_pb2.END_KIND_LUMP, mass=2.0, resistance=0.5))
     basis = basis_pb2.BasisReference(problem=problem, specification=modes(24))
     field = sampled(np.stack([PARABOLA, PARABOLA]), X)
     without = live.stub.Project(pb.ProjectRequest(basis=basis, sampled=field))

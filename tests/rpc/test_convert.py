@@ -1,4 +1,4 @@
-"""Messages to problems and back: every form and kind arrives, and what the core could not be told is refused."""
+"""Messages to problems and back: every form arrives, and what the core could not be told is refused."""
 
 from __future__ import annotations
 

@@ -53,9 +53,7 @@ async def _failures(address: str, counters: Counters) -> list[grpc.aio.AioRpcErr
     return found
 
 
-def test_a_defect_becomes_internal_with_an_incident(
-    tmp_path: Path, caplog: pytest.LogCaptureFixture
-) -> None:
+def test_a_defect_becomes_internal_with_an_incident(tmp_path: Path, caplog: pytest.LogCaptureFixture) -> None:
     counters = Counters()
     logger = logging.getLogger("modewright_service")
     propagate, logger.propagate = logger.propagate, True
@@ -68,7 +66,7 @@ def test_a_defect_becomes_internal_with_an_incident(
     for error in failures:
         assert error.code() is grpc.StatusCode.INTERNAL
         assert "secret" not in str(error)
-        trailers = {key: value for key, value in error.trailing_metadata()}
+        trailers = dict(error.trailing_metadata())
         info = ErrorInfo()
         assert Status.FromString(trailers["grpc-status-details-bin"]).details[0].Unpack(info)
         assert info.reason == "INTERNAL"

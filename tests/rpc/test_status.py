@@ -53,7 +53,11 @@ def test_every_reason_has_the_code_of_its_block_in_the_contract(reason: Reason) 
     assert CODES[reason] is expected
     assert status.code == expected.value[0]
     assert status.message == "what happened"
-    assert (info.reason, info.domain, dict(info.metadata)) == (reason.value, "modewright", {"reached": "1e-07"})
+    assert (info.reason, info.domain, dict(info.metadata)) == (
+        reason.value,
+        "modewright",
+        {"reached": "1e-07"},
+    )
     assert not bad.field_violations
 
 

@@ -69,7 +69,11 @@ class Spool:
 
 def _locked(folder: Path) -> IO[str]:
     file = (folder / _LOCK).open("w")
-    fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
+    try:
+        fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
+    except OSError:
+        file.close()
+        raise
     return file
 
 

@@ -15,9 +15,9 @@ _PHASE: Final = 20.0
 _UNKNOWNS: Final = 32
 # Measured on one core of this decade for 8 to 1024 modes: fixed cost, cost an element, cost a mode and
 # element.
-_SECONDS_FIXED: Final = 0.02
-_SECONDS_ELEMENT: Final = 1.5e-3
-_SECONDS_MODE_ELEMENT: Final = 2.0e-5
+_SECONDS_FIXED: Final = 0.03
+_SECONDS_ELEMENT: Final = 5.4e-3
+_SECONDS_MODE_ELEMENT: Final = 1.0e-5
 
 
 @dataclass(frozen=True)
