@@ -141,7 +141,9 @@ def _unpack(status: status_pb2.Status) -> tuple[str, dict[str, str], list[errors
 def _without(message: str, violations: Iterable[errors.Violation]) -> str:
     """The status text without the violations, which it repeats in the contract's field names."""
     for violation in violations:
-        for text in (str(violation), f"{violation.field}: {violation.message}"):
+        bare = f"{violation.field}: {violation.message}"
+        # The service appends the number even where the message holds it already.
+        for text in (f"{bare} (got {violation.number})", str(violation), bare):
             message = message.replace(text, "", 1)
     return message.strip("; ")
 

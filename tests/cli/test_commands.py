@@ -227,6 +227,43 @@ def test_refused_requests_name_field_and_number(fail: Any, document: Path, tmp_p
     assert not (tmp_path / "c.npz").exists()
 
 
+def test_expression_without_a_value_somewhere(fail: Any, document: Path, tmp_path: Path) -> None:
+    options = ("--modes", 3, "--expression", "1/(x-0.5)", "-o", tmp_path / "c.npz")
+    code, message = fail("project", document, *options)
+    assert code == 3
+    assert re.fullmatch(r"modewright: error: expression: .* at x = 0\.5\n", message)
+
+
+def test_a_second_equal_solve_is_answered_without_solving(run: Any, document: Path) -> None:
+    options = ("solve", document, "--modes", 5, "--rtol", "1e-6")
+    first, second = run(*options), run(*options)
+    assert second["answered_from_cache"] is True
+    assert second["server_solve_count"] == first["server_solve_count"]
+    assert second["basis_key"] == first["basis_key"]
+
+
+def test_a_failed_start_is_told_in_two_lines(document: Path) -> None:
+    script = (
+        "import sys\n"
+        "from modewright import embedded\n"
+        "from modewright.cli import main\n"
+        "embedded._MODULE = 'modewright_service.no_such_part'\n"
+        "sys.exit(main(sys.argv[1:]))\n"
+    )
+    environment = {k: v for k, v in os.environ.items() if not k.startswith("MODEWRIGHT_")}
+    done = subprocess.run(
+        [sys.executable, "-c", script, "check", str(document)],
+        capture_output=True,
+        text=True,
+        check=False,
+        env=environment,
+    )
+    assert done.returncode == 4
+    assert done.stderr.startswith("modewright: error: the embedded service ended with exit code 1")
+    assert "no_such_part" in done.stderr
+    assert len(done.stderr.splitlines()) == 2
+
+
 def test_missing_files_are_named(fail: Any, tmp_path: Path) -> None:
     code, message = fail("check", tmp_path / "nowhere.toml")
     assert code == 3

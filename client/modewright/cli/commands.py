@@ -94,6 +94,11 @@ def solve(options: argparse.Namespace) -> dict[str, Any]:
     return {
         **_about("solve", options, basis),
         **{name: np.asarray(values).tolist() for name, values in columns.items()},
+        "confirmed": basis.confirmed.tolist(),
+        "scale": basis.scale,
+        "answered_from_cache": basis.answered_from_cache,
+        "server_solve_count": basis.server_solve_count,
+        "solve_seconds": basis.solve_seconds,
         "output": None if target is None else str(target),
     }
 

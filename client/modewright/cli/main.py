@@ -108,7 +108,11 @@ def _guarded(run: Any, *, verbose: bool) -> int:
 
 def _say(error: Exception | str, code: int, verbose: bool) -> int:
     """Print one message: the field and the number are in the text of every error of this package."""
-    print(f"modewright: error: {error}", file=sys.stderr)
+    lines = str(error).splitlines() or [type(error).__name__]
+    if len(lines) > 2 and not verbose:
+        # The tail of a service's log: its last line says what happened, the rest is for --verbose.
+        lines = [lines[0], f"... {lines[-1].strip()}"]
+    print(f"modewright: error: {lines[0]}", *lines[1:], sep="\n", file=sys.stderr)
     reason = getattr(error, "reason", "")
     if verbose and reason:
         print(f"modewright: reason {reason}", file=sys.stderr)

@@ -49,7 +49,7 @@ def draw(pipe: BuriedPipe, cooling: Cooling, findings: Findings, target: Path) -
     figure = Figure(figsize=(13.0, 12.2), facecolor="white")
     FigureCanvasAgg(figure)
     grid = figure.add_gridspec(
-        3, 1, height_ratios=(0.86, 1.0, 1.0), hspace=0.30, left=0.06, right=0.94, top=0.895, bottom=0.05
+        3, 1, height_ratios=(0.86, 1.0, 1.0), hspace=0.30, left=0.06, right=0.94, top=0.895, bottom=0.065
     )
     figure.text(
         0.06,
@@ -68,6 +68,14 @@ def draw(pipe: BuriedPipe, cooling: Cooling, findings: Findings, target: Path) -
         fontsize=10.5,
         color=FAINT,
         va="top",
+    )
+    figure.text(
+        0.94,
+        0.012,
+        "Invented data. Not a design approval: local codes and licensed practice decide.",
+        fontsize=8.5,
+        color=FAINT,
+        ha="right",
     )
     _sections(figure, grid[0], pipe, cooling, findings)
     middle = grid[1].subgridspec(1, 2, wspace=0.24)
@@ -251,7 +259,7 @@ def _flux(axes: Axes, pipe: BuriedPipe, cooling: Cooling, findings: Findings) ->
     _time_axis(axes, hours)
     peak = int(np.argmax(flux))
     axes.annotate(
-        f"the last peak's heat arrives:\n{flux[peak]:.1f} W/m² after {hours[peak]:.1f} h",
+        f"the last peak's heat arrives:\n{flux[peak]:.1f} W/m² after {hours[peak]:.2f} h",
         (hours[peak], flux[peak]),
         xytext=(-20, -70),
         textcoords="offset points",
