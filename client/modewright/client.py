@@ -293,31 +293,27 @@ class Service:
         request: Any,
         problem: Problem | None,
         *,
-        resend: Any = None,
+        resend: Callable[[], Any] | None = None,
         rename: Callable[[str], str] | None = None,
         timeout: float | None = None,
     ) -> Any:
-        """One unary call with its repetitions; `resend` is sent instead after an unknown basis."""
-        for message in (request, resend):
-            if message is not None and message.ByteSize() > MAX_MESSAGE:
-                size = message.ByteSize()
-                raise errors.LimitExceeded(
-                    f"the request of {size} bytes is larger than the limit of {MAX_MESSAGE} bytes",
-                    reason="LIMIT_EXCEEDED",
-                    metadata={"limit": str(MAX_MESSAGE), "requested": str(size)},
-                )
+        """One unary call with its repetitions; what `resend` makes is sent after an unknown basis."""
+        _check_size(request)
 
-        def invoke(message: Any) -> Callable[[float], Any]:
-            def once(left: float) -> Any:
-                call = getattr(self._attach().stub, method).future(
-                    message, timeout=left, metadata=_route(problem)
-                )
-                return self._watched(call, call.result)
+        def send(message: Any, left: float) -> Any:
+            call = getattr(self._attach().stub, method).future(
+                message, timeout=left, metadata=_route(problem)
+            )
+            return self._watched(call, call.result)
 
-            return once
+        def send_whole(left: float) -> Any:
+            assert resend is not None
+            message = resend()
+            _check_size(message)
+            return send(message, left)
 
         retry = self._retry(method, problem, rename, timeout)
-        answer = retry(invoke(request), invoke(resend) if resend is not None else None)
+        answer = retry(lambda left: send(request, left), send_whole if resend is not None else None)
         _check_version(answer.api_version)
         return answer
 
@@ -421,6 +417,17 @@ def _argument(path: str) -> str:
 
 def _route(problem: Problem | None) -> tuple[tuple[str, str], ...]:
     return ((ROUTE_HEADER, problem.route),) if problem is not None else ()
+
+
+def _check_size(message: Any) -> None:
+    """Raises LimitExceeded for a request that the service would refuse to receive."""
+    size = message.ByteSize()
+    if size > MAX_MESSAGE:
+        raise errors.LimitExceeded(
+            f"the request of {size} bytes is larger than the limit of {MAX_MESSAGE} bytes",
+            reason="LIMIT_EXCEEDED",
+            metadata={"limit": str(MAX_MESSAGE), "requested": str(size)},
+        )
 
 
 def _check_version(version: str) -> None:

@@ -7,7 +7,8 @@ Its life:
   end of the process.
 - A socket pair joins parent and child. The child writes one line of JSON with its address when it is ready,
   and exits when its side reads the end of file: a parent that is killed takes its service along.
-- The socket and the log lie in a folder that only this user may enter.
+- The socket and the log lie in a folder that only this user may enter. The folder goes with the service; what
+  a killed parent leaves is swept up by the next start.
 - A forked child of this process goes on using its parent's service, through a channel of its own, as long as
   that answers, and otherwise starts one itself. Only the process that started a service stops it.
 """
@@ -21,6 +22,7 @@ import os
 import re
 import shutil
 import socket
+import stat
 import subprocess
 import sys
 import tempfile
@@ -37,6 +39,11 @@ __all__ = ["Options", "Running", "acquire", "release"]
 # sun_path holds 108 bytes on Linux and 104 on macOS, gRPC adds some of its own.
 _LONGEST_PATH = 100
 _TAIL = 4000
+_PREFIX = "modewright-"
+_SOCKET = "service.sock"
+_LOG = "service.log"
+# Seconds. A folder this old without anybody listening is no service that is just starting.
+_STALE_AFTER = 3600.0
 _MODULE = "modewright_service"
 
 
@@ -62,7 +69,7 @@ class Running:
         self.pid = os.getpid()
         self.users = 0
         self.folder = _private_folder()
-        self.log = self.folder / "service.log"
+        self.log = self.folder / _LOG
         self.address = ""
         ours, theirs = socket.socketpair()
         self._life = ours
@@ -75,7 +82,7 @@ class Running:
             raise
 
     def _spawn(self, theirs: socket.socket, log: int) -> subprocess.Popen[bytes]:
-        path = self.folder / "service.sock"
+        path = self.folder / _SOCKET
         command = [sys.executable, "-m", _MODULE, "--embedded", "--ready-fd", str(theirs.fileno())]
         command += ["--socket", str(path), "--workers", str(self.options.workers)]
         # A session of its own: Ctrl-C at a terminal interrupts the caller, which decides about its service.
@@ -137,11 +144,7 @@ class Running:
         """Whether it still runs; asked from a forked child, whether it still answers."""
         if os.getpid() == self.pid:
             return self._child.poll() is None
-        with contextlib.suppress(OSError), socket.socket(socket.AF_UNIX) as probe:
-            probe.settimeout(1.0)
-            probe.connect(self.address.removeprefix("unix:"))
-            return True
-        return False
+        return _answers(self.address.removeprefix("unix:"))
 
     def forget(self) -> None:
         """In a forked child: lets go of the line that keeps the service alive; it is the parent's alone."""
@@ -169,13 +172,35 @@ class Running:
 
 def _private_folder() -> Path:
     """A fresh folder, mode 0700, short enough for the path of a socket in it."""
-    longest = _LONGEST_PATH - len("/service.sock")
+    longest = _LONGEST_PATH - len(f"/{_SOCKET}")
     for parent in (tempfile.gettempdir(), "/tmp"):
-        folder = Path(tempfile.mkdtemp(prefix="modewright-", dir=parent))
+        folder = Path(tempfile.mkdtemp(prefix=_PREFIX, dir=parent))
         if len(os.fsencode(folder)) < longest:
+            _sweep(folder)
             return folder
         folder.rmdir()
     raise StartFailed(f"no temporary folder with a path below {longest} bytes: set TMPDIR to a shorter one")
+
+
+def _sweep(own: Path) -> None:
+    """Removes what killed parents left behind beside `own`: old folders of this user without a server."""
+    for folder in own.parent.glob(f"{_PREFIX}*"):
+        with contextlib.suppress(OSError):
+            found = folder.lstat()
+            ours = stat.S_ISDIR(found.st_mode) and found.st_uid == os.getuid()
+            old = time.time() - found.st_mtime > _STALE_AFTER
+            names = {entry.name for entry in folder.iterdir()} if ours and old else {""}
+            if names <= {_SOCKET, _LOG} and not _answers(folder / _SOCKET):
+                shutil.rmtree(folder)
+
+
+def _answers(path: Path | str) -> bool:
+    """Whether somebody listens at a Unix socket."""
+    with contextlib.suppress(OSError), socket.socket(socket.AF_UNIX) as probe:
+        probe.settimeout(1.0)
+        probe.connect(str(path))
+        return True
+    return False
 
 
 def missing_distributions() -> list[str]:

@@ -231,14 +231,19 @@ class _Calls:
 
     def unary(self, request: Any) -> Any:
         """One call: by the basis's key, and with the whole problem where the service does not hold it."""
-        resend = None
         request.basis.CopyFrom(self.basis.reference())
-        if self.basis.problem is not None:
-            resend = type(request)()
-            resend.CopyFrom(request)
-            resend.basis.CopyFrom(self.basis.reference(whole=True))
+
+        def whole() -> Any:
+            request.basis.CopyFrom(self.basis.reference(whole=True))
+            return request
+
         answer = self.service.unary(
-            self.method, request, self.basis.problem, resend=resend, rename=self._rename, timeout=self.left()
+            self.method,
+            request,
+            self.basis.problem,
+            resend=whole if self.basis.problem is not None else None,
+            rename=self._rename,
+            timeout=self.left(),
         )
         if answer.basis_key != self.basis.key:
             raise errors.InternalError(f"asked for basis {self.basis.key}, answered for {answer.basis_key}")

@@ -91,6 +91,7 @@ class _Servicer(eigenbasis_service_pb2_grpc.EigenbasisServiceServicer):
         progress = solve_pb2.SolveProgress(
             stage=solve_pb2.SOLVE_STAGE_COMPUTING, elapsed_seconds=0.5, steps=3
         )
+        context.add_callback(self._script.cancelled.set)
         yield solve_pb2.WatchSolveResponse(progress=progress)
         self._script.step(request, context)
         yield solve_pb2.WatchSolveResponse(answer=answer(request.specification.modes))
