@@ -245,7 +245,7 @@ def demo(options: argparse.Namespace) -> None:
     """The demonstration prints its own tables."""
     from modewright.demo import run_demonstration
 
-    run_demonstration(options.output, options.service)
+    run_demonstration(options.output, options.service, timeout=options.timeout)
 
 
 COMMANDS: dict[str, Callable[[argparse.Namespace], dict[str, Any] | None]] = {

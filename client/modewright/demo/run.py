@@ -50,10 +50,12 @@ def logger_times() -> npt.NDArray[np.float64]:
     )
 
 
-def run_demonstration(folder: Path, address: str | None = None, out: TextIO | None = None) -> None:
+def run_demonstration(
+    folder: Path, address: str | None = None, out: TextIO | None = None, timeout: float | None = None
+) -> None:
     """Run the demonstration, print its tables to ``out`` (standard output) and write its files to ``folder``.
 
-    ``address``: of a running service; without one, the service is started for the occasion. Raises
+    ``address``: of a running service; without one, the service is started for the occasion. ``timeout``: seconds for each call. Raises
     ``modewright.ModewrightError`` when the service fails and ``OSError`` when the folder cannot be written.
     """
     stream = sys.stdout if out is None else out
@@ -76,7 +78,7 @@ def run_demonstration(folder: Path, address: str | None = None, out: TextIO | No
     say()
 
     problem = modewright.Problem.load(document)
-    with modewright.connect(address) as service:
+    with modewright.connect(address, timeout=timeout) as service:
         basis = service.solve(problem, modes=MODES)
         basis.save(folder / "basis.record")
         findings = examine(basis, pipe, cooling)
