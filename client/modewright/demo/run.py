@@ -55,8 +55,9 @@ def run_demonstration(
 ) -> None:
     """Run the demonstration, print its tables to ``out`` (standard output) and write its files to ``folder``.
 
-    ``address``: of a running service; without one, the service is started for the occasion. ``timeout``: seconds for each call. Raises
-    ``modewright.ModewrightError`` when the service fails and ``OSError`` when the folder cannot be written.
+    ``address``: of a running service; without one, the service is started for the occasion. ``timeout``:
+    seconds for each call. Raises ``modewright.ModewrightError`` when the service fails and ``OSError`` when
+    the folder cannot be written.
     """
     stream = sys.stdout if out is None else out
 
