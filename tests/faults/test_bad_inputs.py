@@ -110,7 +110,11 @@ PROBLEMS: dict[str, tuple[Document, Bad]] = {
     ),
     "a pole inside": (
         _document(layers_1_q="1/(x-0.7)**2"),
-        Bad(Unsupported, "UNSUPPORTED_COEFFICIENT", "layers[1].q", "0.7"),
+        Bad(InvalidProblem, "", "layers[1].q", "0.7"),
+    ),
+    "a pole between two numbers": (
+        _document(layers_1_q="1/(x-2**0.5/2)**2"),
+        Bad(InvalidProblem, "", "layers[1].q", "0.707106"),
     ),
     "the logarithm of a negative number": (
         _document(layers_1_q="log(x-0.7)"),
@@ -204,9 +208,13 @@ PROBLEMS: dict[str, tuple[Document, Bad]] = {
         {"layers": GOOD["layers"], "coupling": {"kind": "periodic"}},
         Bad(Unsupported, "UNSUPPORTED_COUPLING", "coupling.kind", "periodic"),
     ),
-    "an interface off the edges": (
-        _document(interfaces=[{"x": 0.3, "resistance": 1.0}]),
-        Bad(InvalidProblem, "BAD_INTERFACE", "interfaces[0].x", "0.3"),
+    "an interface outside the domain": (
+        _document(interfaces=[{"x": 1.3, "resistance": 1.0}]),
+        Bad(InvalidProblem, "BAD_INTERFACE", "interfaces[0].x", "1.3"),
+    ),
+    "two interfaces at one place": (
+        _document(interfaces=[{"x": 0.4, "resistance": 1.0}, {"x": 0.4, "spring": 1.0}]),
+        Bad(InvalidProblem, "BAD_INTERFACE", "interfaces[1].x", "0.4"),
     ),
     "a negative resistance": (
         _document(interfaces=[{"x": 0.4, "resistance": -1e-4}]),
@@ -235,7 +243,7 @@ Call = Callable[[modewright.Basis], object]
 REQUESTS: dict[str, tuple[Call, Bad]] = {
     "a mesh outside the domain": (
         lambda basis: basis.project(np.ones(21), x=MESH * 1.2),
-        Bad(InvalidRequest, "MESH_OUTSIDE_DOMAIN", "x", "1.2"),
+        Bad(InvalidRequest, "MESH_OUTSIDE_DOMAIN", "x[17]", "1.02"),
     ),
     "a mesh that stops short": (
         lambda basis: basis.project(np.ones(21), x=MESH * 0.8),
@@ -246,7 +254,7 @@ REQUESTS: dict[str, tuple[Call, Bad]] = {
         Bad(InvalidRequest, "BAD_MESH", "x", "0.95"),
     ),
     "a mesh with a point twice": (
-        lambda basis: basis.project(np.ones(22), x=np.sort(np.append(MESH, 0.6))),
+        lambda basis: basis.project(np.ones(22), x=np.sort(np.append(MESH, MESH[12]))),
         Bad(InvalidRequest, "BAD_MESH", "x", "0.6"),
     ),
     "NaN in a mesh": (

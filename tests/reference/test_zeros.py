@@ -30,7 +30,7 @@ def test_zeros_equal_the_index(name: str, solved: Callable[..., modewright.Basis
 
 @pytest.mark.parametrize("name", AHEAD)
 def test_zeros_of_what_can_be_told_apart(name: str, solved: Callable[..., modewright.Basis]) -> None:
-    """Within a group of values closer than rounding (2e-15 in the triple wells) only the subspace is defined."""
+    """In a group of values as close as rounding (2e-15 in a triple well) only the subspace is defined."""
     modes = highest_low_index(name) + 1
     basis = solved(name, modes=modes)
     alone = np.bincount(basis.groups)[basis.groups] == 1
