@@ -1,138 +1,341 @@
-"""Piecewise polynomial approximations of p, q and w on a mesh, with error bounds."""
+"""Piecewise polynomial approximations of p, q and w with computed error bounds.
+
+Each layer is cut at the knots of its tables, at interfaces inside it, and where a branch of its
+expressions switches or p or w is zero (:mod:`.cuts`). The pieces are then halved until every
+coefficient is met to the tolerance on every element (:mod:`.fitting`), all elements of one generation
+at once. A narrow bump between the nodes is not missed: the bound rests on enclosures of the coefficient
+in the complex plane, not on samples.
+
+When the number of elements reaches its limit, or an element the resolution of double precision, the
+error bounds say what was reached; nothing is refused for being too fine.
+"""
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
-import numpy.typing as npt
-from numpy.polynomial import legendre
 
-from . import discs
-from .description import Coefficient, Constant, Expression, FloatArray, Problem, Samples
-from .errors import InvalidProblem, Reason
-from .evaluation import point_signs, run
+from .coefficients import CoefficientMesh, Ranges, ranges, restrict
+from .cuts import find_cuts
+from .description import Constant, Expression, FloatArray, Layer, Problem
+from .errors import CoreError, Reason, Unsupported
+from .evaluation import constant_value
 from .expressions import parse
+from .fitting import Fit, Source, fit, make_source, negative_error, undefined_error, values_at
+from .legendre import UNIT
 from .problem import resolve
-from .samples import table
+from .validation import has_mass, zero_weight_error
 
+__all__ = ["CoefficientMesh", "Ranges", "approximate", "ranges", "restrict"]
 
-@dataclass(frozen=True, eq=False)
-class CoefficientMesh:
-    """Legendre coefficients of p, q, w on every element, in t = (2x - a - b)/(b - a).
+Poll = Callable[[], None]
+# What a layer consists of: (value, relative error) of constant p, q, w, or the sources of the three.
+_Part = list[tuple[float, float]] | list[Source]
 
-    ``edges`` (E+1,), ``layer`` (E,); ``p``, ``q``, ``w`` (E, d+1), factor r^g included and 1/p inverted;
-    ``p_error``, ``w_error`` (E,) bounds of sup |p - p~|/p and sup |w - w~|/w; ``q_error`` (E,) bound of
-    sup |q - q~|.
-    """
-
-    edges: FloatArray
-    layer: npt.NDArray[np.int64]
-    p: FloatArray
-    q: FloatArray
-    w: FloatArray
-    p_error: FloatArray
-    q_error: FloatArray
-    w_error: FloatArray
+DEFAULT_TOLERANCE = 4e-15
+DEFAULT_MAX_ELEMENTS = 4000
+DEFAULT_MAX_DEGREE = 24
+_NAMES = ("p", "q", "w")
+# An element is not halved below these shares of its layer and of the spacing of doubles.
+_SMALLEST_SHARE = 2.0**-44
+_SMALLEST_SPACINGS = 256.0
+# Elements that every later layer may count on, however greedy the ones before it are.
+_RESERVE = 16
+_LOOKS = 32
 
 
 def _no_poll() -> None:
     return None
 
 
-def _function(coefficient: Coefficient) -> tuple[Callable[[FloatArray], Any], list[float]]:
-    match coefficient:
-        case Constant(value):
-            return lambda x: np.full(x.shape, float(value)), []
-        case Expression(text):
-            program = parse(text)
+@dataclass(eq=False)
+class _Rows:
+    """Accepted elements: their ends, owner, series and errors."""
 
-            def evaluate(x: FloatArray) -> Any:
-                points = discs.exact(x.astype(np.longdouble))
-                return run(program, points, signs=point_signs(program, points)).centre
+    left: list[FloatArray] = field(default_factory=list)
+    right: list[FloatArray] = field(default_factory=list)
+    layer: list[int] = field(default_factory=list)
+    fits: dict[str, list[Fit]] = field(default_factory=lambda: {name: [] for name in _NAMES})
+    count: int = 0
 
-            return evaluate, []
-        case Samples():
-            pieces = table(coefficient)
-
-            def tabulated(x: FloatArray) -> Any:
-                middle = x[:, x.shape[1] // 2]
-                return pieces.on(pieces.piece(middle), discs.exact(x.astype(np.longdouble))).centre
-
-            return tabulated, [float(knot) for knot in pieces.knots]
+    def add(self, left: FloatArray, right: FloatArray, layer: int, fits: dict[str, Fit]) -> None:
+        self.left.append(left)
+        self.right.append(right)
+        self.layer.extend([layer] * len(left))
+        for name in _NAMES:
+            self.fits[name].append(fits[name])
+        self.count += len(left)
 
 
 def approximate(
     problem: Problem,
     *,
-    tolerance: float = 5e-15,
-    max_elements: int = 4000,
-    max_degree: int = 24,
-    poll: Callable[[], None] = _no_poll,
+    tolerance: float = DEFAULT_TOLERANCE,
+    max_elements: int = DEFAULT_MAX_ELEMENTS,
+    max_degree: int = DEFAULT_MAX_DEGREE,
+    poll: Poll = _no_poll,
 ) -> CoefficientMesh:
-    """Approximate the coefficients of a validated problem."""
+    """Polynomials for the coefficients of a validated problem, with bounds of their errors.
+
+    ``tolerance`` bounds the truncation of p and w relative to their least value on each element, and of
+    q relative to the larger of its greatest modulus there and Lambda times the layer's mean w
+    (Lambda = (pi / int sqrt(w/p) dx)^2). Rounding comes on top; the errors returned hold both.
+    ``max_elements`` limits halving only: knots and interfaces are always edges. A branch is taken to
+    switch at the double next to its crossing; the bounds do not cover what lies between the two.
+
+    Raises :class:`InvalidProblem` for a coefficient that is negative or undefined somewhere and for
+    w = 0 everywhere without a mass; :class:`Unsupported` where p vanishes or a coefficient is infinite
+    at an end; whatever ``poll`` raises.
+    """
     resolved = resolve(problem)
-    nodes = np.cos(np.pi * (np.arange(max_degree + 1) + 0.5) / (max_degree + 1))[::-1]
-    matrix = np.linalg.inv(legendre.legvander(nodes, max_degree))
-    power = problem.geometry.power
-    out: dict[str, list[Any]] = {"p": [], "q": [], "w": []}
-    edges = [float(resolved.layer_edges[0])]
-    owner = []
     joints = [joint.x for joint in resolved.joints]
+    edges = resolved.layer_edges
+    power = problem.geometry.power
+    parts: list[_Part] = []
     for index, layer in enumerate(problem.layers):
-        a, b = resolved.layer_edges[index : index + 2]
-        functions = {name: _function(getattr(layer, name)) for name in ("p", "q", "w")}
-        cuts = {float(a), float(b)}
-        for _, knots in functions.values():
-            cuts.update(k for k in knots if a < k < b)
-        cuts.update(x for x in joints if a < x < b)
-        ordered = sorted(cuts)
-        queue = list(zip(ordered[:-1], ordered[1:], strict=True))[::-1]
-        while queue:
-            poll()
-            left, right = queue.pop()
-            x = (left + right) / 2 + (right - left) / 2 * nodes[np.newaxis]
-            coefficients = {}
-            smooth = True
-            for name, (function, _) in functions.items():
-                values = np.asarray(function(x), dtype=np.float64)
-                if name == "p" and layer.reciprocal_p:
-                    values = 1 / values
-                values = values * x**power
-                if name in ("p", "w") and values.min() < 0:
-                    place = int(np.argmin(values))
-                    message = f"{name} must not be negative: {name}({x.flat[place]!r})"
-                    raise InvalidProblem.at(
-                        Reason.NEGATIVE_COEFFICIENT, f"layers[{index}].{name}", message, values.min()
-                    )
-                c = values[0] @ matrix.T
-                coefficients[name] = c
-                smooth &= bool(np.abs(c[-3:]).max() <= 1e-14 * np.abs(c).max())
-            if smooth or len(edges) + len(queue) > max_elements:
-                for name, c in coefficients.items():
-                    out[name].append(c)
-                edges.append(right)
-                owner.append(index)
-            else:
-                middle = (left + right) / 2
-                queue += [(middle, right), (left, middle)]
-    stacked = {name: np.array(rows) for name, rows in out.items()}
-    used = max(
-        int(
-            np.flatnonzero(np.any(np.abs(c) > 1e-15 * np.abs(c).max(axis=1, keepdims=True), axis=0)).max(
-                initial=0
-            )
+        constants = _constants(layer) if power == 0 else None
+        parts.append(constants or _sources(layer, index, power, max_degree))
+    scales = _q_scales(parts, edges)
+    rows = _Rows()
+    total = len(problem.layers)
+    for index, part in enumerate(parts):
+        left, right = float(edges[index]), float(edges[index + 1])
+        inside = [x for x in joints if left < x < right]
+        if isinstance(part[0], tuple):
+            _add_constant(rows, part, index, [left, *inside, right], max_degree)
+            continue
+        poll()
+        task = _LayerTask(
+            index,
+            part,
+            (left, right),
+            tolerance,
+            scales[index],
+            max_degree,
+            max_elements - _RESERVE * (total - index - 1),
+            (index == 0, index == total - 1),
         )
-        for c in stacked.values()
+        task.run(rows, inside, poll)
+    mesh = _assembled(rows, edges)
+    if not np.any(mesh.w) and not has_mass(problem):
+        raise zero_weight_error()
+    return mesh
+
+
+def _constants(layer: Layer) -> list[tuple[float, float]] | None:
+    """(value, relative error) of p, q, w where all three are constant; None if one is not."""
+    found = []
+    for name in _NAMES:
+        coefficient = getattr(layer, name)
+        if isinstance(coefficient, Constant):
+            value, error = float(coefficient.value), 0.0
+        elif isinstance(coefficient, Expression):
+            program = parse(coefficient.text)
+            known = constant_value(program)
+            if known is None or not math.isfinite(known):
+                return None
+            value, error = known, 0.0 if len(program.steps) == 1 else 2 * UNIT
+        else:
+            return None
+        if name == "p" and layer.reciprocal_p:
+            value, error = 1.0 / value, error + 2 * UNIT
+        found.append((value, error))
+    return found
+
+
+def _sources(layer: Layer, index: int, power: int, max_degree: int) -> list[Source]:
+    coefficients = (layer.p, layer.q, layer.w)
+    return [
+        make_source(
+            coefficient,
+            name,
+            f"layers[{index}].{name}",
+            power,
+            layer.reciprocal_p and name == "p",
+            max_degree,
+        )
+        for name, coefficient in zip(_NAMES, coefficients, strict=True)
+    ]
+
+
+def _add_constant(
+    rows: _Rows, constants: list[tuple[float, float]], index: int, edges: list[float], max_degree: int
+) -> None:
+    count = len(edges) - 1
+    fits = {}
+    for name, (value, error) in zip(_NAMES, constants, strict=True):
+        series = np.zeros((count, max_degree + 1))
+        series[:, 0] = value
+        relative = np.full(count, error)
+        fits[name] = Fit(series, abs(value) * relative, relative, np.ones(count, bool), series[:, 0])
+    rows.add(np.array(edges[:-1]), np.array(edges[1:]), index, fits)
+
+
+def _q_scales(parts: list[_Part], edges: FloatArray) -> list[float]:
+    """Lambda times the mean w of each layer, from samples: the size below which q cannot matter."""
+    if all(isinstance(part, list) and isinstance(part[0], tuple) for part in parts):
+        return [0.0] * len(parts)
+    phase = 0.0
+    means = []
+    fractions = (np.arange(_LOOKS) + 0.5) / _LOOKS
+    for index, part in enumerate(parts):
+        left, right = float(edges[index]), float(edges[index + 1])
+        x = (left + (right - left) * fractions)[:, np.newaxis]
+        p, w = (_looked_at(part[k], x) for k in (0, 2))
+        with np.errstate(all="ignore"):
+            ratio = np.sqrt(np.maximum(w, 0.0) / p)
+        phase += float(np.where(np.isfinite(ratio), ratio, 0.0).mean()) * (right - left)
+        means.append(float(np.mean(w)))
+    with np.errstate(all="ignore"):
+        scales = (np.pi / np.float64(phase)) ** 2 * np.array(means)
+    return [float(scale) if np.isfinite(scale) and scale > 0 else 0.0 for scale in scales]
+
+
+def _looked_at(part: Source | tuple[float, float], x: FloatArray) -> FloatArray:
+    if isinstance(part, tuple):
+        return np.array([part[0]])
+    return np.asarray(values_at(part, x, x[:, 0]).centre[:, 0], dtype=np.float64)
+
+
+@dataclass(eq=False)
+class _LayerTask:
+    """Cutting, fitting and halving of one layer."""
+
+    index: int
+    sources: list[Source]
+    ends: tuple[float, float]
+    tolerance: float
+    scale: float
+    max_degree: int
+    budget: int
+    outermost: tuple[bool, bool]
+    opened: dict[str, list[tuple[float, float]]] = field(default_factory=dict)
+
+    def run(self, rows: _Rows, inside: list[float], poll: Poll) -> None:
+        left, right = self.ends
+        cuts = {left, right, *inside}
+        for source in self.sources:
+            cuts.update(self._cuts_of(source))
+        edges = np.array(sorted(cuts))
+        self._check_points(edges)
+        lows, highs = edges[:-1], edges[1:]
+        smallest = (right - left) * _SMALLEST_SHARE
+        while lows.size:
+            poll()
+            fits = self._fitted(lows, highs)
+            good = fits["p"].good & fits["q"].good & fits["w"].good
+            spacing = _SMALLEST_SPACINGS * np.spacing(np.maximum(np.abs(lows), np.abs(highs)))
+            small = highs - lows <= np.maximum(smallest, spacing)
+            self._refuse_unbounded(fits, small, lows, highs)
+            halve = ~(good | small)
+            if rows.count + len(lows) + int(halve.sum()) > self.budget:
+                halve[:] = False
+            done = ~halve
+            rows.add(lows[done], highs[done], self.index, {n: _rows_of(f, done) for n, f in fits.items()})
+            lows, highs = lows[halve], highs[halve]
+            middle = lows + (highs - lows) / 2
+            lows, highs = np.concatenate((lows, middle)), np.concatenate((middle, highs))
+
+    def _cuts_of(self, source: Source) -> list[float]:
+        left, right = self.ends
+        if source.table is not None:
+            knots = source.table.knots
+            # Knots that miss the layer's edge by rounding would leave slivers beside it.
+            slack = (right - left) * 1e-12
+            return [float(k) for k in knots[(knots > left + slack) & (knots < right - slack)]]
+        found = find_cuts(source.program, None, left, right, source.signed)
+        if found.negative is not None:
+            middle = sum(found.negative) / 2
+            value = values_at(source, np.array([[middle]]), np.array([middle])).centre[0, 0]
+            raise negative_error(source, middle, float(value))
+        self.opened[source.name] = list(found.open)
+        return [*found.points, *(x for stretch in found.open for x in stretch if left < x < right)]
+
+    def _check_points(self, edges: FloatArray) -> None:
+        """Refuse a coefficient that is infinite, or a p that is zero, at an end or a cut."""
+        for source in self.sources:
+            values = values_at(source, edges[:, np.newaxis], edges)
+            centre, radius = values.centre[:, 0], values.radius[:, 0]
+            for k in np.flatnonzero(~np.isfinite(radius)):
+                raise self._singular(source, float(edges[k]), "is not finite")
+            if source.name == "p":
+                for k in np.flatnonzero(np.abs(centre) <= radius):
+                    raise self._singular(source, float(edges[k]), "is zero")
+
+    def _singular(self, source: Source, x: float, what: str) -> CoreError:
+        at_end = (x == self.ends[0] and self.outermost[0]) or (x == self.ends[1] and self.outermost[1])
+        message = f"{source.name} {what} at x = {x!r}; singular points are not handled by this version"
+        if at_end:
+            return Unsupported.at(Reason.UNSUPPORTED_END, source.path, message, x, x=x)
+        if what == "is zero":
+            return Unsupported.at(Reason.UNSUPPORTED_COEFFICIENT, source.path, message, x, x=x)
+        return undefined_error(source, x)
+
+    def _refuse_unbounded(
+        self, fits: dict[str, Fit], small: Any, lows: FloatArray, highs: FloatArray
+    ) -> None:
+        """On the smallest elements p must have shown a positive bound, and all a finite one."""
+        for source in self.sources:
+            found = fits[source.name]
+            bad = ~np.isfinite(found.absolute)
+            if source.name == "p":
+                bad |= found.floor <= 0
+            for k in np.flatnonzero(small & bad):
+                nearest = float(highs[k] if highs[k] == self.ends[1] else lows[k])
+                if np.isfinite(found.absolute[k]):
+                    raise self._singular(source, nearest, "is zero")
+                raise undefined_error(source, nearest)
+
+    def _fitted(self, lows: FloatArray, highs: FloatArray) -> dict[str, Fit]:
+        return {
+            source.name: fit(
+                source,
+                lows,
+                highs,
+                tolerance=self.tolerance,
+                scale=self.scale,
+                most_degree=self.max_degree,
+                opened=self._opened(source, lows, highs),
+            )
+            for source in self.sources
+        }
+
+    def _opened(self, source: Source, lows: FloatArray, highs: FloatArray) -> Any:
+        opened = np.zeros(lows.shape, dtype=bool)
+        for start, stop in self.opened.get(source.name, ()):
+            opened |= (lows < stop) & (highs > start)
+        return opened
+
+
+def _rows_of(fitted: Fit, chosen: Any) -> Fit:
+    return Fit(
+        fitted.series[chosen],
+        fitted.absolute[chosen],
+        fitted.relative[chosen],
+        fitted.good[chosen],
+        fitted.floor[chosen],
     )
-    errors = {name: 1e-14 * np.ones(len(owner)) for name in ("p", "w")}
+
+
+def _assembled(rows: _Rows, edges: FloatArray) -> CoefficientMesh:
+    left = np.concatenate(rows.left)
+    order = np.argsort(left, kind="stable")
+    series = {name: np.concatenate([f.series for f in rows.fits[name]])[order] for name in _NAMES}
+    relative = {name: np.concatenate([f.relative for f in rows.fits[name]])[order] for name in _NAMES}
+    absolute = {name: np.concatenate([f.absolute for f in rows.fits[name]])[order] for name in _NAMES}
+    used = max(int(np.flatnonzero(c.any(axis=0)).max(initial=0)) for c in series.values())
     return CoefficientMesh(
-        np.array(edges),
-        np.array(owner, dtype=np.int64),
-        *(stacked[name][:, : used + 1] for name in ("p", "q", "w")),
-        errors["p"],
-        1e-14 * np.abs(stacked["q"]).max(axis=1),
-        errors["w"],
+        np.append(left[order], edges[-1]),
+        np.array(rows.layer, dtype=np.int64)[order],
+        np.ascontiguousarray(series["p"][:, : used + 1]),
+        np.ascontiguousarray(series["q"][:, : used + 1]),
+        np.ascontiguousarray(series["w"][:, : used + 1]),
+        relative["p"],
+        absolute["q"],
+        relative["w"],
+        absolute["w"],
     )

@@ -95,8 +95,7 @@ def inverse(a: Disc) -> Disc:
 def div(a: Disc, b: Disc) -> Disc:
     quotient = mul(a, inverse(b))
     centre = a.centre / b.centre
-    moved = np.abs(quotient.centre - centre)
-    return _rounded(centre, np.where(quotient.radius == 0, 0, quotient.radius + moved), 4.0)
+    return _rounded(centre, quotient.radius + np.abs(quotient.centre - centre))
 
 
 def _majorant_radius(size: Array, ratio: Array, growth: Callable[[Array], Array]) -> Array:
@@ -121,6 +120,8 @@ def power(a: Disc, exponent: float) -> Disc:
         relative = safe**n * np.expm1(n * np.log1p(a.radius / safe))
         radius = np.where(positive, relative, a.radius**n if n else 0)
         return _rounded(centre, radius, 2.0 * max(n, 1))
+    if not whole and exponent > 0 and not np.iscomplexobj(a.centre):
+        return _rising(a, lambda y: y**exponent, 2.0 * exponent + FUNCTION_UNITS)
     off_cut = a if whole else _off_cut(a)
     size = np.abs(off_cut.centre)
     ratio = off_cut.radius / size
@@ -133,6 +134,20 @@ def power(a: Disc, exponent: float) -> Disc:
     return _rounded(centre, radius, 2.0 * s + FUNCTION_UNITS)
 
 
+def _rising(a: Disc, function: Callable[[Array], Array], units: float = FUNCTION_UNITS) -> Disc:
+    """An increasing function of real discs in [0, inf), the branch point included."""
+    least = low(a)
+    # An interval that begins at 0 was widened by the guard of the operations that made it.
+    inside = least >= -(2.0**-36) * high(a)
+    safe = np.where(inside, np.maximum(least, 0), 0)
+    centre = function(np.where(inside, np.maximum(a.centre, 0), 0))
+    most = function(np.where(inside, np.maximum(high(a), 0), 0))
+    radius = np.maximum(most - centre, centre - function(safe))
+    # The two ends carry roundings of their own.
+    radius = np.where(a.radius == 0, 0, radius + units * unit(a.centre) * most)
+    return _rounded(centre, np.where(inside, radius, np.inf), units)
+
+
 def _off_cut(a: Disc) -> Disc:
     """``a`` where it stays off the cut (-inf, 0] of log and sqrt, unknown elsewhere."""
     real, size = a.centre.real, np.abs(a.centre)
@@ -143,7 +158,10 @@ def _off_cut(a: Disc) -> Disc:
 
 def exp(a: Disc) -> Disc:
     centre = np.exp(a.centre)
-    return _rounded(centre, np.abs(centre) * np.expm1(a.radius), FUNCTION_UNITS)
+    # |exp z - exp c| <= exp(Re c + r) - |exp c|; the sum first, so that a large radius cannot meet 0 * inf.
+    wide = np.exp(a.centre.real + a.radius)
+    radius = np.where(a.radius > 1, wide, np.abs(centre) * np.expm1(np.minimum(a.radius, 1)))
+    return _rounded(centre, radius, FUNCTION_UNITS)
 
 
 def log(a: Disc) -> Disc:
@@ -154,6 +172,8 @@ def log(a: Disc) -> Disc:
 
 
 def sqrt(a: Disc) -> Disc:
+    if not np.iscomplexobj(a.centre):
+        return _rising(a, np.sqrt)
     a = _off_cut(a)
     centre = np.sqrt(a.centre)
     ratio = a.radius / np.abs(a.centre)

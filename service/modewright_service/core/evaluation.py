@@ -164,23 +164,25 @@ def point_signs(program: Program, x: Disc, samples: Disc | None = None) -> dict[
     """The signs of the switching steps' arguments at points (real centres, radius zero)."""
     signs: dict[int, Any] = {}
     for index in switches(program):
-        step = program.steps[index]
         # An argument may itself hold switches, all of which come earlier in the program.
         part = Program(program.steps[: index + 1])
         arguments: dict[int, Disc] = {}
         run(part, x, samples, {**signs, index: np.ones(())}, arguments)
         argument = arguments[index]
         signs[index] = np.broadcast_to(np.sign(argument.centre), x.centre.shape)
-        assert step.name in SWITCHES
     return signs
 
 
-def degree(program: Program) -> int | None:
-    """A degree in x of a program that is a polynomial; None if it is not one (or has samples)."""
+def degree(program: Program, samples_degree: int | None = None) -> int | None:
+    """A degree in x of a program that is a polynomial; None if it is not one.
+
+    ``samples_degree`` is that of the pieces of the table, where the program uses one.
+    """
     degrees: list[int | None] = []
     for step in program.steps:
         known = [degrees[operand] for operand in step.operands]
-        degrees.append(_step_degree(step, known, program))
+        found = samples_degree if step.name == "samples" else _step_degree(step, known, program)
+        degrees.append(found)
     return degrees[-1]
 
 

@@ -19,15 +19,20 @@ from .discs import Array, Disc
 
 @dataclass(frozen=True, eq=False)
 class Table:
-    """``knots`` (K+1,), ``powers`` (K, d+1): the value on piece k is sum_j powers[k, j] (x - knots[k])^j."""
+    """Pieces between ``knots`` (K+1,): sum_j powers[k, j] (x - origins[k])^j on piece k; powers (K, d+1).
+
+    The origin is the knot with the smaller value, where the polynomial is then exact: a table that falls
+    to zero is zero there, not a rounding error beside it.
+    """
 
     knots: FloatArray
+    origins: FloatArray
     powers: FloatArray
 
     @property
     def degree(self) -> int:
         """The degree of the pieces."""
-        return self.powers.shape[1] - 1
+        return int(self.powers.shape[1]) - 1
 
     def piece(self, x: FloatArray) -> Array:
         """The piece that holds each x; the outer ones are continued."""
@@ -37,7 +42,7 @@ class Table:
     def on(self, pieces: Array, x: Disc) -> Disc:
         """The polynomial of piece ``pieces[i]`` on the discs ``x[i, ...]``."""
         shape = (-1,) + (1,) * (x.centre.ndim - 1)
-        origin = self.knots[pieces].reshape(shape).astype(x.centre.dtype)
+        origin = self.origins[pieces].reshape(shape).astype(x.centre.dtype)
         distance = discs.sub(x, discs.exact(origin))
         powers = self.powers[pieces].astype(x.centre.dtype)
         value = discs.exact(powers[:, -1].reshape(shape))
@@ -63,14 +68,32 @@ def table(samples: Samples) -> Table:
         case Interpolation.STEP_RIGHT:
             return _steps(x, values[1:])
         case Interpolation.LINEAR:
-            return Table(x, np.stack((values[:-1], np.diff(values) / np.diff(x)), axis=1))
+            slopes = np.diff(values) / np.diff(x)
+            return _from_ends(x, values, np.stack((slopes, slopes), axis=1), 1)
         case Interpolation.MONOTONE_CUBIC:
-            cubic = PchipInterpolator(x, values)
+            slope = PchipInterpolator(x, values).derivative()(x)
         case Interpolation.CUBIC_SPLINE:
-            cubic = CubicSpline(x, values, bc_type="not-a-knot")
-    return Table(x, np.ascontiguousarray(cubic.c[::-1].T))
+            slope = CubicSpline(x, values, bc_type="not-a-knot")(x, 1)
+    return _from_ends(x, values, np.stack((slope[:-1], slope[1:]), axis=1), 3)
 
 
 def _steps(x: FloatArray, values: FloatArray) -> Table:
     keep = np.flatnonzero(np.concatenate(([True], values[1:] != values[:-1])))
-    return Table(np.append(x[keep], x[-1]), values[keep, np.newaxis])
+    return Table(np.append(x[keep], x[-1]), x[keep], values[keep, np.newaxis])
+
+
+def _from_ends(x: FloatArray, values: FloatArray, slopes: FloatArray, degree: int) -> Table:
+    """Hermite pieces from the values (K+1,) and each piece's slopes at its left and right end (K, 2)."""
+    turned = np.abs(values[1:]) < np.abs(values[:-1])
+    width = np.where(turned, -1, 1) * np.diff(x)
+    near = np.where(turned, values[1:], values[:-1])
+    far = np.where(turned, values[:-1], values[1:])
+    near_slope = np.where(turned, slopes[:, 1], slopes[:, 0])
+    far_slope = np.where(turned, slopes[:, 0], slopes[:, 1])
+    origins = np.where(turned, x[1:], x[:-1])
+    if degree == 1:
+        return Table(x, origins, np.stack((near, near_slope), axis=1))
+    chord = (far - near) / width
+    second = (3 * chord - 2 * near_slope - far_slope) / width
+    third = (near_slope + far_slope - 2 * chord) / (width * width)
+    return Table(x, origins, np.stack((near, near_slope, second, third), axis=1))

@@ -66,7 +66,7 @@ class _Faults:
     def finite(self, value: object, field: str) -> bool:
         """Whether ``value`` is a finite real number; reports it otherwise."""
         try:
-            number = float(value)  # type: ignore[arg-type]
+            number = float("text" if isinstance(value, str) else value)  # type: ignore[arg-type]
         except (TypeError, ValueError, OverflowError):
             self.add(Reason.NOT_FINITE, field, "must be a real number", str(value))
             return False
