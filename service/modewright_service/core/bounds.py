@@ -149,13 +149,17 @@ def _thresholds(
         cuts = _cuts(mesh, pieces)
         comparison = build_comparison(mesh, resolved, cuts)
         open_trials = np.flatnonzero(counted > wanted)
-        counted[open_trials] = np.minimum(counted[open_trials], comparison.count(trials[open_trials]))
+        counted[open_trials] = np.minimum(
+            counted[open_trials], comparison.count(trials[open_trials], poll=poll)
+        )
         poll()
         # an index is served when some gap above it, at most a block away, is met
         gap_met = np.zeros(lam.size + _BLOCK, dtype=bool)
         gap_met[wanted[counted <= wanted]] = True
         windows = np.lib.stride_tricks.sliding_window_view(gap_met[1:], _BLOCK)
-        if windows[:count].any(axis=1).all() or 4 * cuts.sum() > _MOST_PIECES:
+        # constant elements gain nothing from more pieces
+        exhausted = 4 * cuts.sum() > _MOST_PIECES or int(cuts.max()) == 1
+        if windows[:count].any(axis=1).all() or exhausted:
             return _Thresholds(trials, counted)
         pieces = 4 * int(cuts.sum())
 

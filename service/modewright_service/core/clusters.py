@@ -15,11 +15,22 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from modewright_service.core.condensed import Chain, Links, Vectors, condense, sweep_left
+from modewright_service.core.condensed import (
+    Chain,
+    Evaluation,
+    Links,
+    Vectors,
+    condense,
+    count_below,
+    eigenvectors,
+    evaluate,
+    sweep_left,
+)
 
-__all__ = ["separate"]
+__all__ = ["OpenChain", "separate"]
 
 Array = NDArray[np.float64]
+IntArray = NDArray[np.int64]
 
 # Neighbours closer than this (relative to their size) form a group: beyond it single vectors are good to
 # 1e-12.
@@ -28,6 +39,26 @@ _CLOSE = 1e-4
 _STEPS = 5
 # Eigenvalues of a group that agree to so many units of rounding are one eigenvalue with several vectors.
 _EQUAL = 64.0 * float(np.finfo(float).eps)
+
+
+@dataclass(frozen=True, eq=False)
+class OpenChain:
+    """The discrete problem with separated ends (a :class:`.spectrum.System`)."""
+
+    chain: Chain
+    multiplicity: int = 1
+
+    def count(self, lam: Array) -> IntArray:
+        """(T,) number of eigenvalues below each lambda."""
+        return count_below(self.chain, lam)
+
+    def evaluate(self, lam: Array, index: IntArray) -> Evaluation:
+        """Counts and Newton corrections; the index decides nothing here, eigenvalues being simple."""
+        return evaluate(self.chain, lam)
+
+    def vectors(self, lam: Array, scale: float) -> Vectors:
+        """Twisted vectors, close groups by block inverse iteration."""
+        return separate(self.chain, lam, eigenvectors(self.chain, lam), scale)
 
 
 @dataclass(frozen=True, eq=False)

@@ -13,6 +13,7 @@ The state is (u, p u') with u >= 0, rescaled freely; a change of sign adds one t
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -25,6 +26,9 @@ __all__ = ["Comparison", "build_comparison"]
 
 Array = NDArray[np.float64]
 IntArray = NDArray[np.int64]
+
+# Pieces between two looks at whether the solve is still wanted: some milliseconds of work.
+_POLL_EVERY = 64
 
 
 @dataclass(frozen=True, eq=False)
@@ -51,10 +55,10 @@ class Comparison:
     def pieces(self) -> int:
         return int(self.length.size)
 
-    def count(self, nu: Array, *, fraction: float = 1.0) -> IntArray:
+    def count(self, nu: Array, *, fraction: float = 1.0, poll: Callable[[], None] | None = None) -> IntArray:
         """(T,) eigenvalues below each nu; fraction multiplies p and 1/R (a bound of part of the energy)."""
         with np.errstate(over="ignore", under="ignore"):
-            return _count(self, np.asarray(nu, dtype=np.float64), fraction)
+            return _count(self, np.asarray(nu, dtype=np.float64), fraction, poll)
 
 
 def build_comparison(mesh: CoefficientMesh, resolved: Resolved, cuts: IntArray) -> Comparison:
@@ -76,11 +80,13 @@ def build_comparison(mesh: CoefficientMesh, resolved: Resolved, cuts: IntArray) 
     )
 
 
-def _count(c: Comparison, nu: Array, fraction: float) -> IntArray:
+def _count(c: Comparison, nu: Array, fraction: float, poll: Callable[[], None] | None) -> IntArray:
     count = np.zeros(nu.size, dtype=np.int64)
     u, v = _start(c.left, nu, fraction, count)
     negative = nu < 0.0
     for j in range(c.pieces):
+        if poll is not None and j % _POLL_EVERY == 0:
+            poll()
         load = c.q[j] - nu * np.where(negative, c.w_lower[j], c.w_upper[j])
         u, v = _advance(u, v, c.length[j], fraction * c.p[j], load, count)
         if c.spring[j] != 0.0 or c.mass[j] != 0.0:

@@ -21,6 +21,7 @@ Newton correction of lambda.
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -51,6 +52,10 @@ IntArray = NDArray[np.int64]
 _CHUNK = 4_000_000
 
 
+def _nothing() -> None:
+    return None
+
+
 @dataclass(frozen=True, eq=False)
 class Chain:
     """Links between n + 1 nodes.
@@ -60,6 +65,7 @@ class Chain:
     left_fixed, right_fixed: u = 0 at the first, last node.
     left_node: first node that lies on the interval (1 where a lump hangs behind a resistance), right_node
         likewise.
+    poll: called between batches of work; may raise.
     """
 
     elements: Elements
@@ -71,6 +77,7 @@ class Chain:
     right_fixed: bool
     left_node: int
     right_node: int
+    poll: Callable[[], None] = _nothing
 
     @property
     def links(self) -> int:
@@ -98,7 +105,7 @@ class Vectors:
     step: Array
 
 
-def build_chain(elements: Elements, resolved: Resolved) -> Chain:
+def build_chain(elements: Elements, resolved: Resolved, poll: Callable[[], None] = _nothing) -> Chain:
     """Links and nodes in order of x: lump, element, resistance, element, ..., lump."""
     edges = elements.mesh.edges
     of_link: list[int] = []
@@ -148,6 +155,7 @@ def build_chain(elements: Elements, resolved: Resolved) -> Chain:
         right.dirichlet,
         left_node,
         right_node,
+        poll,
     )
 
 
@@ -188,6 +196,7 @@ def condense(chain: Chain, lam: Array, with_mass: bool) -> Links:
     mass_rows = el.mass_c.sum(axis=2)
     chunk = max(1, _CHUNK // max(1, el.theta.size))
     for start in range(0, lam.size, chunk):
+        chain.poll()
         part = slice(start, min(start + chunk, lam.size))
         l = lam[None, part] + el.shift[:, None]  # noqa: E741
         den = 1.0 - l[:, :, None] * el.theta[:, None, :]

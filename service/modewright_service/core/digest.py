@@ -127,7 +127,9 @@ def rung(modes: int) -> int:
     Raises InvalidRequest below 1.
     """
     if modes < 1:
-        raise InvalidRequest.at(Reason.BAD_REQUEST, "modes", "at least one mode must be asked for", str(modes))
+        raise InvalidRequest.at(
+            Reason.BAD_REQUEST, "modes", "at least one mode must be asked for", str(modes)
+        )
     step = _FIRST_RUNG
     while True:
         if modes <= step:

@@ -24,6 +24,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from modewright_service.core.approximation import CoefficientMesh
+from modewright_service.core.quadrature import gauss_legendre
 
 __all__ = ["Elements", "Reference", "build_elements", "reference"]
 
@@ -55,7 +56,7 @@ def _legendre(t: Array, degree: int) -> Array:
 @lru_cache(maxsize=64)
 def reference(degree: int, points: int) -> Reference:
     """Shape functions of `degree` >= 2 at `points` Gauss-Legendre points (cached; do not write to it)."""
-    t, weight = np.polynomial.legendre.leggauss(points)
+    t, weight = gauss_legendre(points)
     shapes = np.zeros((degree + 1, degree + 1))
     shapes[0, :2] = (0.5, -0.5)
     shapes[1, :2] = (0.5, 0.5)

@@ -19,8 +19,8 @@ from numpy.typing import NDArray
 from modewright.record import EndInfo, Record
 from modewright_service.core.approximation import CoefficientMesh, approximate
 from modewright_service.core.bounds import Bounds, bound
-from modewright_service.core.clusters import separate
-from modewright_service.core.condensed import Chain, build_chain, count_below, eigenvectors
+from modewright_service.core.clusters import OpenChain
+from modewright_service.core.condensed import Chain, build_chain
 from modewright_service.core.digest import ALGORITHM_VERSION, basis_key, problem_digest
 from modewright_service.core.elements import build_elements
 from modewright_service.core.errors import NotConverged, Reason, SpectrumExhausted
@@ -33,7 +33,7 @@ from modewright_service.core.mesh import (
 )
 from modewright_service.core.modes import FluxDefect, Modes, flux_defects, interior_zeros, make_modes
 from modewright_service.core.problem import EndTerm, Problem, Resolved, resolve, validate
-from modewright_service.core.spectrum import floor_below, lowest
+from modewright_service.core.spectrum import System, floor_below, lowest
 
 __all__ = ["SolveOptions", "solve"]
 
@@ -116,7 +116,7 @@ def solve(
                 break
             mesh = bisect_elements(result.mesh, marked)
             degree = result.chain.elements.reference.degree
-            chain = build_chain(build_elements(mesh, degree), resolved)
+            chain = build_chain(build_elements(mesh, degree), resolved, poll)
             top = _top_of(chain, wanted, top)
         poll()
         result = _one_pass(chain, resolved, count, wanted, top, scale, poll)
@@ -124,6 +124,10 @@ def solve(
             break
     assert result is not None
     return _record(problem, resolved, result, count, rtol, scale, time.perf_counter() - started)
+
+
+def _system(chain: Chain) -> System:
+    return OpenChain(chain)
 
 
 def _spare(count: int) -> int:
@@ -154,8 +158,8 @@ def _resolve_top(
         # unknowns at least half as many again as modes, whatever the phase says
         least = int(np.ceil(1.5 * (wanted + 2) / (degree - 1)))
         mesh = refine_for(coefficients, low, top, radians, least, chosen.max_elements)
-        chain = build_chain(build_elements(mesh, degree), resolved)
-        found = int(count_below(chain, np.array([top]))[0])
+        chain = build_chain(build_elements(mesh, degree), resolved, poll)
+        found = int(_system(chain).count(np.array([top]))[0])
         if found >= wanted:
             return chain, top
         phase += (wanted - found + 0.5) * np.pi
@@ -170,7 +174,7 @@ def _resolve_top(
 def _top_of(chain: Chain, wanted: int, top: float) -> float:
     """`top`, raised a little where a finer mesh moved the last eigenvalue across it."""
     for _ in range(60):
-        if int(count_below(chain, np.array([top]))[0]) >= wanted:
+        if int(_system(chain).count(np.array([top]))[0]) >= wanted:
             return top
         top += 0.1 * abs(top) + np.finfo(float).tiny
     raise NotConverged.at(Reason.NOT_CONVERGED, "modes", "the spectrum moved under refinement", str(wanted))
@@ -185,11 +189,12 @@ def _one_pass(
     scale: float,
     poll: Callable[[], None],
 ) -> _Pass:
-    floor = floor_below(chain, scale)
-    values = lowest(chain, wanted, floor, top, scale, poll).values
-    _check_counts(chain, values)
+    system = _system(chain)
+    floor = floor_below(system, scale)
+    values = lowest(system, wanted, floor, top, scale, poll).values
+    _check_counts(system, values)
     poll()
-    modes = make_modes(chain, separate(chain, values, eigenvectors(chain, values), scale))
+    modes = make_modes(chain, system.vectors(values, scale))
     poll()
     defect = flux_defects(chain, values, modes)
     mesh, degree = chain.elements.mesh, chain.elements.reference.degree
@@ -197,13 +202,13 @@ def _one_pass(
     return _Pass(mesh, chain, values, modes, defect, bounds)
 
 
-def _check_counts(chain: Chain, values: Array) -> None:
+def _check_counts(system: System, values: Array) -> None:
     """One count between all neighbours that can be told apart: index n has exactly n eigenvalues below it."""
     gaps = np.diff(values)
     clear = np.flatnonzero(gaps > 1e-12 * (np.abs(values[1:]) + np.abs(values[:-1])))
     if clear.size == 0:
         return
-    counts = count_below(chain, 0.5 * (values[clear] + values[clear + 1]))
+    counts = system.count(0.5 * (values[clear] + values[clear + 1]))
     wrong = np.flatnonzero(counts != clear + 1)
     if wrong.size:
         n = int(clear[wrong[0]])

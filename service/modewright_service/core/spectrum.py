@@ -10,14 +10,15 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
-from modewright_service.core.condensed import Chain, count_below, evaluate
+from modewright_service.core.condensed import Evaluation, Vectors
 from modewright_service.core.errors import NotConverged, Reason
 
-__all__ = ["Spectrum", "floor_below", "lowest"]
+__all__ = ["Spectrum", "System", "floor_below", "lowest"]
 
 Array = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -28,6 +29,23 @@ _EPS = float(np.finfo(float).eps)
 _ROUNDS = 200
 
 
+class System(Protocol):
+    """A discrete problem that can be counted and corrected at many lambda at once."""
+
+    @property
+    def multiplicity(self) -> int:
+        """How many eigenvalues may coincide: 1 for separated ends, 2 for coupled ones."""
+
+    def count(self, lam: Array) -> IntArray:
+        """(T,) number of eigenvalues below each lambda."""
+
+    def evaluate(self, lam: Array, index: IntArray) -> Evaluation:
+        """Counts and corrections towards the eigenvalue of each index at (T,) lambda."""
+
+    def vectors(self, lam: Array, scale: float) -> Vectors:
+        """Vectors of unit norm at (T,) converged eigenvalues, members of close groups orthogonal."""
+
+
 @dataclass(frozen=True, eq=False)
 class Spectrum:
     """values: (N,) ascending eigenvalues of the discrete problem. evaluations: chain evaluations spent."""
@@ -36,14 +54,14 @@ class Spectrum:
     evaluations: int
 
 
-def floor_below(chain: Chain, scale: float) -> float:
+def floor_below(system: System, scale: float) -> float:
     """A lambda below the whole discrete spectrum, not much further down than needed.
 
     scale: a positive lambda of the size of the smallest eigenvalue gaps, the first trial.
     """
     trial = -1e-3 * scale
     for _ in range(400):
-        if int(count_below(chain, np.array([trial]))[0]) == 0:
+        if int(system.count(np.array([trial]))[0]) == 0:
             return trial
         trial *= 2.0
     raise NotConverged.at(
@@ -52,7 +70,7 @@ def floor_below(chain: Chain, scale: float) -> float:
 
 
 def lowest(
-    chain: Chain, count: int, floor: float, top: float, scale: float, poll: Callable[[], None]
+    system: System, count: int, floor: float, top: float, scale: float, poll: Callable[[], None]
 ) -> Spectrum:
     """The `count` lowest eigenvalues, all of which lie in (floor, top).
 
@@ -61,7 +79,7 @@ def lowest(
     """
     parameters = np.linspace(0.0, 1.0, int(1.3 * count) + 3)
     grid = floor + (top - floor) * parameters**2
-    counts = np.maximum.accumulate(count_below(chain, grid))
+    counts = np.maximum.accumulate(system.count(grid))
     index = np.arange(count)
     above = np.searchsorted(counts, index, side="right")
     if int(counts[-1]) < count:
@@ -81,7 +99,7 @@ def lowest(
             break
         poll()
         a = np.flatnonzero(active)
-        result = evaluate(chain, value[a])
+        result = system.evaluate(value[a], index[a])
         evaluations += 1
         is_below = result.count <= index[a]
         low[a] = np.where(is_below, value[a], low[a])
@@ -91,7 +109,7 @@ def lowest(
         width = high[a] - low[a]
         step = np.abs(result.step)
         rounding = 4.0 * _EPS * (np.abs(value[a]) + scale)
-        isolated = (count_high[a] - count_low[a] == 1) & (count_low[a] == index[a])
+        isolated = count_high[a] - count_low[a] <= system.multiplicity
         target = value[a] + result.step
         # close to an eigenvalue its side is decided by rounding: a step this small may leave the bracket
         slack = 1e3 * rounding
