@@ -14,13 +14,13 @@ from __future__ import annotations
 import os
 import socket
 import ssl
-import threading
 from dataclasses import dataclass
 from pathlib import Path
 
 import grpc
 
 from modewright.errors import InvalidRequest, Violation
+from modewright.forking import ForkSafeLock
 
 __all__ = ["MAX_MESSAGE", "Target", "Tls", "handshake_failure", "lease", "release"]
 
@@ -75,16 +75,7 @@ class _Shared:
 
 
 _channels: dict[tuple[int, Target], _Shared] = {}
-_lock = threading.Lock()
-
-
-def _renew_lock() -> None:
-    # Another thread of the parent may have held it while forking; in the child nobody would release it.
-    global _lock
-    _lock = threading.Lock()
-
-
-os.register_at_fork(after_in_child=_renew_lock)
+_lock = ForkSafeLock()
 
 
 def lease(target: Target) -> grpc.Channel:

@@ -23,6 +23,7 @@ from modewright.channels import MAX_MESSAGE, Target, Tls
 from modewright.checks import Checks, quote
 from modewright.document.messages import message_from_problem, word_of
 from modewright.ends import Ends, ends_from_message
+from modewright.forking import ForkSafeLock
 from modewright.problem import Problem
 from modewright.retry import Retry
 from modewright.stack import Stack
@@ -93,6 +94,15 @@ class _Attachment:
     running: embedded.Running | None
     stub: Any
     suspect: bool = False
+
+
+_lock = ForkSafeLock()
+
+
+def _give_back(attachment: _Attachment) -> None:
+    channels.release(attachment.target)
+    if attachment.running is not None:
+        embedded.release(attachment.running)
 
 
 def connect(
@@ -183,20 +193,27 @@ class Service:
                 return held
             # The embedded service was killed: another one takes over.
             self._detach()
+        made = self._make_attachment()
+        with _lock:
+            # Another thread may have been faster, or have closed the handle.
+            if not self._closed and (self._attachment is None or self._attachment.pid != made.pid):
+                self._attachment = made
+                return made
+        _give_back(made)
+        return self._attach()
+
+    def _make_attachment(self) -> _Attachment:
         address = self._address or os.environ.get(ADDRESS_VARIABLE)
         running = None if address else embedded.acquire(self._options)
         target = Target(address, self._tls) if address else Target(running.address if running else "")
         stub = eigenbasis_service_pb2_grpc.EigenbasisServiceStub(channels.lease(target))
-        self._attachment = _Attachment(os.getpid(), target, running, stub)
-        return self._attachment
+        return _Attachment(os.getpid(), target, running, stub)
 
     def _detach(self) -> None:
-        held, self._attachment = self._attachment, None
-        if held is None or held.pid != os.getpid():
-            return
-        channels.release(held.target)
-        if held.running is not None:
-            embedded.release(held.running)
+        with _lock:
+            held, self._attachment = self._attachment, None
+        if held is not None and held.pid == os.getpid():
+            _give_back(held)
 
     # ---- calls ----
 
@@ -349,6 +366,8 @@ class Service:
         rename: Callable[[str], str] | None,
         timeout: float | None,
     ) -> Retry:
+        # The start of an embedded service has its own time limit and does not count towards the call's.
+        self._attach()
         names = [rename or _argument] if problem is None else [problem.field_in_document, rename or _argument]
 
         def renamed(path: str) -> str:

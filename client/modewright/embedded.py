@@ -26,13 +26,13 @@ import stat
 import subprocess
 import sys
 import tempfile
-import threading
 import time
 from dataclasses import dataclass
 from importlib import metadata
 from pathlib import Path
 
 from modewright.errors import ServiceNotInstalled, StartFailed
+from modewright.forking import ForkSafeLock
 
 __all__ = ["Options", "Running", "acquire", "release"]
 
@@ -220,7 +220,7 @@ def missing_distributions() -> list[str]:
 # ---- the services of this process ----
 
 _running: dict[Options, Running] = {}
-_lock = threading.Lock()
+_lock = ForkSafeLock()
 
 
 def acquire(options: Options) -> Running:
@@ -247,9 +247,6 @@ def release(running: Running) -> None:
 
 
 def _after_fork() -> None:
-    # Another thread of the parent may have held the lock; in the child nobody would release it.
-    global _lock
-    _lock = threading.Lock()
     for running in _running.values():
         running.forget()
         running.users = 0

@@ -120,6 +120,9 @@ class ModewrightError(Exception):
             return f"{self.message}: {detail}"
         return self.message or detail or self.reason or type(self).__name__
 
+    def __repr__(self) -> str:
+        return f"{type(self).__name__}({str(self)!r})"
+
     def __reduce__(self) -> tuple[Any, ...]:
         return (_rebuild, (type(self), self.message, self.reason, self.violations, dict(self.metadata)))
 

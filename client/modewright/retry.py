@@ -81,6 +81,9 @@ class Retry:
                 if isinstance(decoded, errors.BasisNotFound) and resend is not None:
                     invoke, resend = resend, None
                     continue
+                if isinstance(decoded, errors.DeadlineExceeded) and not decoded.reason:
+                    message = f"no answer within the time limit of {self.timeout:g} s"
+                    raise errors.DeadlineExceeded(message, reason="DEADLINE") from None
                 if not is_code(error, grpc.StatusCode.UNAVAILABLE):
                     raise decoded from None
                 failures += 1

@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+import os
 import pickle
+import signal
 import threading
 from collections.abc import Iterator
+from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 from typing import Any
 
@@ -13,7 +16,7 @@ import numpy as np
 import pytest
 
 import modewright
-from modewright import transfers
+from modewright import channels, transfers
 from modewright.arrays import from_message, to_message
 from modewright.channels import MAX_MESSAGE, _host_and_port
 from modewright.pieces import Pieces
@@ -95,6 +98,19 @@ def test_a_callback_that_raises_cancels_the_solve(script: Script, service: modew
     with pytest.raises(KeyboardInterrupt):
         service.solve(PROBLEM, modes=3, progress=stop)
     assert script.cancelled.wait(30)
+
+
+def test_an_interrupt_cancels_the_call(script: Script, service: modewright.Service) -> None:
+    def interrupt(request: object, context: grpc.ServicerContext) -> None:
+        context.add_callback(script.cancelled.set)
+        os.kill(os.getpid(), signal.SIGINT)
+        script.cancelled.wait(30)
+
+    script.steps = [interrupt]
+    with pytest.raises(KeyboardInterrupt):
+        service.solve(PROBLEM, modes=3)
+    assert script.cancelled.wait(30)
+    assert service.solve(PROBLEM, modes=3).count == 3
 
 
 def test_errors_speak_of_a_stack_in_its_own_names(script: Script, service: modewright.Service) -> None:
@@ -335,6 +351,19 @@ def test_a_closed_handle_refuses_calls(script: Script) -> None:
             service.solve(PROBLEM, modes=3)
         with pytest.raises(modewright.ServiceClosed):
             basis.project("x")
+
+
+def test_threads_that_start_together_share_one_attachment(script: Script) -> None:
+    with serving(script) as address:
+        service = modewright.connect(address)
+        with ThreadPoolExecutor(8) as threads:
+            solved = [threads.submit(service.solve, PROBLEM, 3) for _ in range(32)]
+            assert [basis.result().count for basis in solved] == [3] * 32
+        assert [
+            shared.users for (_, target), shared in channels._channels.items() if target.address == address
+        ] == [1]
+        service.close()
+        assert all(target.address != address for _, target in channels._channels)
 
 
 def test_handles_to_one_address_share_a_channel_until_the_last_closes(script: Script) -> None:
