@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis.extra import numpy as hnp
 
 from modewright.arrays import field_array, from_message, real_vector, to_message
@@ -49,6 +49,7 @@ def test_the_bytes_are_little_endian_in_c_order() -> None:
     assert message.data == np.array([1.0, 2.0, 3.0, 4.0], dtype="<f8").tobytes()
 
 
+@settings(deadline=None, derandomize=True)
 @given(hnp.arrays(hnp.floating_dtypes(sizes=(32, 64)), hnp.array_shapes(min_dims=0, max_dims=4, min_side=0)))
 def test_any_array_comes_back_bit_for_bit(array: np.ndarray[Any, np.dtype[Any]]) -> None:
     native = field_array("values", array)

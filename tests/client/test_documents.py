@@ -11,7 +11,7 @@ from typing import Any
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 import modewright
@@ -165,6 +165,7 @@ _problems = st.builds(
 )
 
 
+@settings(deadline=None, derandomize=True)
 @given(_problems)
 def test_any_problem_survives_document_message_and_pickle(problem: modewright.Problem) -> None:
     again = modewright.Problem.from_dict(json.loads(json.dumps(problem.to_dict())))
