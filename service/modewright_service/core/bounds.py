@@ -40,6 +40,8 @@ _FRACTIONS = (0.3, 0.6, 0.9)
 # Pieces of the comparison problem: the first try and the most.
 _FIRST_PIECES = 64
 _MOST_PIECES = 24_000
+# Trials beyond which the finer comparisons look at a part of them only.
+_MANY = 600
 # Share of int p u'^2 that carries the defect where the rest of the form could be negative.
 _PART = 0.8
 
@@ -143,12 +145,19 @@ def _thresholds(
     below = lam[0] - (scale + abs(lam[0])) * np.array([1e6, 1e3, 30.0, 4.0, 1.0, 0.25, 0.05])
     trials = np.sort(np.concatenate([below, trials]))
     wanted = np.searchsorted(lam, trials, side="left")
+    one_each = np.concatenate([[True], np.diff(wanted) != 0])
     counted = np.full(trials.size, np.iinfo(np.int64).max)
     pieces = _FIRST_PIECES
+    # constant elements gain nothing from more pieces
+    constant = int(_cuts(mesh, _MOST_PIECES).max()) == 1
     while True:
         cuts = _cuts(mesh, pieces)
         comparison = build_comparison(mesh, resolved, cuts)
-        open_trials = np.flatnonzero(counted > wanted)
+        unmet = counted > wanted
+        if pieces > _FIRST_PIECES and trials.size > _MANY:
+            # one trial in every third gap serves all blocks; the sweeps over many pieces are what costs
+            unmet &= one_each & (wanted % 3 == 0)
+        open_trials = np.flatnonzero(unmet)
         counted[open_trials] = np.minimum(
             counted[open_trials], comparison.count(trials[open_trials], poll=poll)
         )
@@ -157,30 +166,35 @@ def _thresholds(
         gap_met = np.zeros(lam.size + _BLOCK, dtype=bool)
         gap_met[wanted[counted <= wanted]] = True
         windows = np.lib.stride_tricks.sliding_window_view(gap_met[1:], _BLOCK)
-        # constant elements gain nothing from more pieces
-        exhausted = 4 * cuts.sum() > _MOST_PIECES or int(cuts.max()) == 1
-        if windows[:count].any(axis=1).all() or exhausted:
+        if windows[:count].any(axis=1).all() or constant or 4 * cuts.sum() > _MOST_PIECES:
             return _Thresholds(trials, counted)
         pieces = 4 * int(cuts.sum())
 
 
 def _cuts(mesh: CoefficientMesh, pieces: int) -> IntArray:
-    """Pieces per element in proportion to how much p, q, w vary on it; 1 where all are constant."""
+    """Pieces per element, about `pieces` in all; 1 where all three coefficients are constant.
+
+    n pieces leave an error of about (phase times relative variation) / n on an element, so that the square root
+    of that product is the best share.
+    """
     lengths = np.diff(mesh.edges)
+    tiny = np.finfo(float).tiny
 
     def variation(c: Array) -> Array:
-        spread = np.abs(c[:, 1:]).sum(axis=1)
-        return spread / np.maximum(np.abs(c[:, 0]), np.finfo(float).tiny)
+        spread: Array = np.abs(c[:, 1:]).sum(axis=1)
+        return spread
 
-    q_scale = np.maximum(np.abs(mesh.q).sum(axis=1).max(), np.finfo(float).tiny)
-    q_share = np.abs(mesh.q[:, 1:]).sum(axis=1) / q_scale
-    varies = variation(mesh.p) + variation(mesh.w) + q_share
-    varies = np.where(varies > 1e-13, varies, 0.0)
-    total = varies.sum()
+    p_mean, w_mean = np.maximum(mesh.p[:, 0], tiny), np.maximum(mesh.w[:, 0], 0.0)
+    travel = lengths * np.sqrt(w_mean / p_mean)
+    relative = variation(mesh.p) / p_mean + variation(mesh.w) / np.maximum(w_mean, tiny)
+    q_spread = variation(mesh.q) * lengths
+    q_size = max(float((np.abs(mesh.q).sum(axis=1) * lengths).sum()), tiny)
+    shares = travel * np.minimum(relative, 2.0) / max(float(travel.sum()), tiny) + q_spread / q_size
+    shares = np.sqrt(np.where(shares > 1e-13 * lengths / lengths.sum(), shares, 0.0))
+    total = float(shares.sum())
     if total == 0.0:
         return np.ones(lengths.size, dtype=np.int64)
-    share: IntArray = np.ceil(pieces * varies / total).astype(np.int64)
-    return np.maximum(share, 1)
+    return np.maximum(np.ceil(pieces * shares / total).astype(np.int64), 1)
 
 
 def _plain(thresholds: _Thresholds, count: int) -> Array:

@@ -50,7 +50,8 @@ class Reference:
 
 
 def _legendre(t: Array, degree: int) -> Array:
-    return np.polynomial.legendre.legvander(t, degree)
+    values: Array = np.polynomial.legendre.legvander(t, degree).astype(np.float64, copy=False)
+    return values
 
 
 @lru_cache(maxsize=64)
