@@ -7,6 +7,7 @@ extrapolated from three meshes by Richardson's rule, twice; no modal code has a 
 import csv
 import io
 import json
+import re
 import subprocess
 import sys
 from dataclasses import dataclass, replace
@@ -125,6 +126,31 @@ def test_tables_are_printed_and_written(outcome: Outcome) -> None:
         assert row["lower bound [1/s]"] in outcome.text
     with (outcome.folder / "outer-flux.csv").open(encoding="utf-8") as handle:
         assert len(list(csv.DictReader(handle))) == outcome.summary["snapshots"]
+
+
+def printed_tables(text: str) -> dict[tuple[str, str], str]:
+    """(first cell of the row, heading) -> cell, for every table in the text; the first of equal headings."""
+    cells: dict[tuple[str, str], str] = {}
+    headings: list[str] = []
+    for line in text.splitlines():
+        row = re.split(r"\s{2,}", line.strip())
+        if "  " in line.strip() and row[0] in ("n", "time [h]"):
+            headings = row
+        elif len(row) == len(headings) and re.fullmatch(r"[\d.]+", row[0]):
+            for heading, cell in zip(headings, row, strict=True):
+                cells.setdefault((row[0], heading), cell)
+    return cells
+
+
+def test_the_readme_shows_what_is_printed(outcome: Outcome) -> None:
+    readme = Path(__file__).resolve().parents[2] / "README.md"
+    shown = printed_tables(readme.read_text(encoding="utf-8"))
+    printed = printed_tables(outcome.text)
+    # Differences between two programs that agree to many digits are noise in their last ones.
+    compared = {key: cell for key, cell in shown.items() if key[1] not in ("difference", "share")}
+    assert len(compared) > 30
+    for key, cell in compared.items():
+        assert float(cell) == pytest.approx(float(printed[key]), rel=1e-6), key
 
 
 def test_cautions_are_printed_and_written(outcome: Outcome) -> None:
