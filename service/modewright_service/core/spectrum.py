@@ -2,8 +2,9 @@
 
 Every index n keeps a bracket (low, high) with count(low) <= n < count(high). Brackets are cut by Newton steps
 of the twisted factorisation, accepted only while the bracket isolates one eigenvalue, else by bisection; all
-indices advance together. The brackets of the accepted values are checked in the end by one more count between
-neighbours.
+indices advance together. In the end every value is confirmed by two counts a few units of rounding to either
+side of it: half-way between two eigenvalues that are close a Newton step is as small as at an eigenvalue, since
+the twisted vector is then the sum of both.
 """
 
 from __future__ import annotations
@@ -27,6 +28,9 @@ _EPS = float(np.finfo(float).eps)
 # Bisection halves a bracket; 200 rounds pass from 1e30 to one unit of rounding with room for Newton's
 # retries.
 _ROUNDS = 200
+# Units of rounding to either side between which a value must be confirmed by counts, whose own sign is rounding
+# closer by.
+_CONFIRMED = 64.0
 
 
 class System(Protocol):
@@ -126,4 +130,33 @@ def lowest(
         raise NotConverged.at(
             Reason.NOT_CONVERGED, "modes", f"bracket of index {n} did not close", repr(value[n])
         )
-    return Spectrum(np.maximum.accumulate(value), evaluations)
+    value, counted = _confirmed(system, value, low, high, scale, poll)
+    return Spectrum(np.maximum.accumulate(value), evaluations + counted)
+
+
+def _confirmed(
+    system: System, value: Array, low: Array, high: Array, scale: float, poll: Callable[[], None]
+) -> tuple[Array, int]:
+    """The values, those that counts do not confirm replaced by bisection of (low, high); and counts spent."""
+    index = np.arange(value.size)
+    margin = _CONFIRMED * _EPS * (np.abs(value) + scale)
+    above_value = system.count(value - margin) > index
+    wrong = np.flatnonzero(above_value | (system.count(value + margin) <= index))
+    poll()
+    value, counted = value.copy(), 2
+    a, b = low[wrong], high[wrong]
+    a = np.where(above_value[wrong], a, np.maximum(a, value[wrong] + margin[wrong]))
+    b = np.where(above_value[wrong], np.minimum(b, value[wrong] - margin[wrong]), b)
+    active = np.arange(wrong.size)
+    for _ in range(_ROUNDS):
+        middle = 0.5 * (a + b)
+        active = active[(b - a)[active] > 4.0 * _EPS * (np.abs(middle) + scale)[active]]
+        if active.size == 0:
+            break
+        below = system.count(middle[active]) <= index[wrong][active]
+        a[active] = np.where(below, middle[active], a[active])
+        b[active] = np.where(below, b[active], middle[active])
+        counted += 1
+        poll()
+    value[wrong] = 0.5 * (a + b)
+    return value, counted
