@@ -183,7 +183,7 @@ def contact(resistance: float = 0.5, pairs: int = 5) -> Record:
 
 
 def point_mass(mass: float = 0.4, count: int = 6) -> Record:
-    """A string held at both ends with a mass in its middle; 2 cos(k/2) = m k sin(k/2), or k/2 a multiple of pi."""
+    """A string held at both ends, a mass in the middle: 2 cos(k/2) = m k sin(k/2), or k/2 multiples of pi."""
     half = np.array(
         [
             brentq(lambda h: np.cos(h) - mass * h * np.sin(h), np.pi * j + 1e-9, np.pi * (j + 1), xtol=1e-15)

@@ -91,7 +91,9 @@ class Interpolant:
         """(2, G): the values' weights in f at the left and at the right end of the domain."""
         ends = np.array([0, self.bounds.size - 2])
         values, slopes = self.rows(ends, self.bounds[[0, -1]])
-        return self.system.gather(values.toarray().T, slopes.toarray().T).T
+        weights = np.ascontiguousarray(values.toarray().T)
+        self.system.gather(weights, slopes.toarray().T)
+        return weights.T
 
 
 def interpolant_of(record: Record, mesh: PointMesh | CellMesh) -> Interpolant:

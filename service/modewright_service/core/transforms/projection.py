@@ -31,8 +31,8 @@ from .meshes import CellMesh, PointMesh
 __all__ = ["ProjectionPlan", "plan_projection"]
 
 Floats = NDArray[np.float64]
-# 64 million numbers: 500,000 points and 128 modes.
-MAX_MATRIX_BYTES: Final = 512 * 1024 * 1024
+# 33 million numbers: 256,000 points and 128 modes. Making it takes about three times the room.
+MAX_MATRIX_BYTES: Final = 256 * 1024 * 1024
 # Fields handled at once, so that memory does not grow with the batch.
 _BATCH: Final = 256
 
@@ -111,19 +111,20 @@ def plan_projection(record: Record, mesh: PointMesh | CellMesh, *, poll: Poll = 
         )
     interpolant = interpolant_of(record, mesh)
     grid = build_grid(record, interpolant.bounds, interpolant.degree)
-    on_values = np.zeros((interpolant.size, record.count))
+    matrix = np.zeros((interpolant.size, record.count))
     on_slopes = np.zeros((interpolant.system.size, record.count))
     for chunk in grid.chunks():
         poll()
         modes = grid.weighted_modes(chunk)
         for rows, target in zip(
-            interpolant.rows(grid.interval[chunk], grid.x[chunk]), (on_values, on_slopes), strict=True
+            interpolant.rows(grid.interval[chunk], grid.x[chunk]), (matrix, on_slopes), strict=True
         ):
             if rows.nnz:
                 # The points ascend, so that a chunk touches neighbouring samples only.
                 first, last = int(rows.indices.min()), int(rows.indices.max()) + 1
                 target[first:last] += rows[:, first:last].T @ modes
-    matrix = interpolant.system.gather(on_values, on_slopes)
+    poll()
+    interpolant.system.gather(matrix, on_slopes)
     end_weights = interpolant.end_weights()
     matrix.flags.writeable = end_weights.flags.writeable = False
     return ProjectionPlan(record, interpolant, grid, matrix, end_weights)

@@ -13,7 +13,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, Final
 
 import numpy as np
 from numpy.typing import NDArray
@@ -24,6 +24,8 @@ __all__ = ["Run", "SlopeSystem", "slope_system"]
 
 Floats = NDArray[np.float64]
 Indices = NDArray[np.intp]
+
+_COLUMNS: Final = 16
 
 
 @dataclass(frozen=True, eq=False)
@@ -52,16 +54,20 @@ class SlopeSystem:
             return np.zeros((0, values.shape[1]), values.dtype)
         return np.asarray(solve_banded((1, 1), self.bands, self.right_side @ values, check_finite=False))
 
-    def gather(self, on_values: Floats, on_slopes: Floats) -> Floats:
-        """The adjoint: functionals of the values (G, N) and of the slopes (M, N) -> of the values alone."""
+    def gather(self, on_values: Floats, on_slopes: Floats) -> None:
+        """The adjoint: adds to functionals of values (G, N) those of slopes (M, N) in the values' terms."""
         if self.size == 0:
-            return on_values
+            return
         transposed = np.zeros_like(self.bands)
         transposed[0, 1:] = self.bands[2, :-1]
         transposed[1] = self.bands[1]
         transposed[2, :-1] = self.bands[0, 1:]
-        solved = solve_banded((1, 1), transposed, on_slopes, check_finite=False)
-        return np.asarray(on_values + self.right_side.T @ solved)
+        adjoint = self.right_side.T.tocsr()
+        # A few columns at a time: the matrix of a large mesh is there once, not four times.
+        for first in range(0, on_slopes.shape[1], _COLUMNS):
+            columns = slice(first, first + _COLUMNS)
+            solved = solve_banded((1, 1), transposed, on_slopes[:, columns], check_finite=False)
+            on_values[:, columns] += adjoint @ solved
 
 
 def slope_system(runs: Sequence[Run], size: int) -> SlopeSystem:
