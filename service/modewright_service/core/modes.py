@@ -136,10 +136,12 @@ def _joint_flux(
     if follower.size:
         node = j + 1
         terms = chain.stiffness[node] - lam * chain.mass[node]
-        return start[follower[0]] - terms * modes.nodes[node]
+        flux: Array = start[follower[0]] - terms * modes.nodes[node]
+        return flux
     leader = np.flatnonzero(at == j - 1)
     terms = chain.stiffness[j] - lam * chain.mass[j]
-    return end_flux[leader[0]] + terms * modes.nodes[j]
+    flux = end_flux[leader[0]] + terms * modes.nodes[j]
+    return flux
 
 
 def interior_zeros(chain: Chain, modes: Modes, legendre: Array) -> NDArray[np.int64]:
@@ -163,4 +165,5 @@ def interior_zeros(chain: Chain, modes: Modes, legendre: Array) -> NDArray[np.in
         signs = np.concatenate([signs, np.sign(modes.nodes[-1:].T)], axis=1)
     last = np.maximum.accumulate(np.where(signs != 0.0, np.arange(signs.shape[1]), 0), axis=1)
     filled = np.take_along_axis(signs, last, axis=1)
-    return np.count_nonzero(filled[:, 1:] * filled[:, :-1] < 0.0, axis=1).astype(np.int64)
+    changes = np.count_nonzero(filled[:, 1:] * filled[:, :-1] < 0.0, axis=1)
+    return np.asarray(changes, dtype=np.int64)
