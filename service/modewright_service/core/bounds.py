@@ -174,8 +174,8 @@ def _thresholds(
 def _cuts(mesh: CoefficientMesh, pieces: int) -> IntArray:
     """Pieces per element, about `pieces` in all; 1 where all three coefficients are constant.
 
-    n pieces leave an error of about (phase times relative variation) / n on an element, so that the square root
-    of that product is the best share.
+    n pieces leave an error of about (phase times relative variation) / n on an element, so that the square
+    root of that product is the best share.
     """
     lengths = np.diff(mesh.edges)
     tiny = np.finfo(float).tiny

@@ -1,9 +1,10 @@
 """Keys: what a problem is, what a basis of it is, and which sizes bases are made in.
 
 A problem's digest is the SHA-256 of our own canonical encoding of its resolved content: a schema tag, strings
-with their length, integers and IEEE-754 doubles little-endian, -0 written as 0, NaN refused. Ends and interfaces
-enter as resolved (geometry applied), expressions as their parsed program: white space, parentheses and the
-spelling of a literal make no difference, and an expression that is only a number is that number.
+with their length, integers and IEEE-754 doubles little-endian, -0 written as 0, NaN refused. Ends and
+interfaces enter as resolved (geometry applied), expressions as their parsed program: white space,
+parentheses and the spelling of a literal make no difference, and an expression that is only a number is
+that number.
 """
 
 from __future__ import annotations
@@ -95,7 +96,8 @@ class _Writer:
 def canonical_bytes(problem: Problem) -> bytes:
     """The canonical encoding of a validated problem.
 
-    Raises InvalidProblem on NaN and on expressions that do not parse, Unsupported on ends that do not resolve.
+    Raises InvalidProblem on NaN and on expressions that do not parse, Unsupported on ends that do not
+    resolve.
     """
     resolved = resolve(problem)
     out = _Writer()

@@ -3,8 +3,8 @@
 Every index n keeps a bracket (low, high) with count(low) <= n < count(high). Brackets are cut by Newton steps
 of the twisted factorisation, accepted only while the bracket isolates one eigenvalue, else by bisection; all
 indices advance together. In the end every value is confirmed by two counts a few units of rounding to either
-side of it: half-way between two eigenvalues that are close a Newton step is as small as at an eigenvalue, since
-the twisted vector is then the sum of both.
+side of it: half-way between two eigenvalues that are close a Newton step is as small as at an eigenvalue,
+since the twisted vector is then the sum of both.
 """
 
 from __future__ import annotations
@@ -28,8 +28,8 @@ _EPS = float(np.finfo(float).eps)
 # Bisection halves a bracket; 200 rounds pass from 1e30 to one unit of rounding with room for Newton's
 # retries.
 _ROUNDS = 200
-# Units of rounding to either side between which a value must be confirmed by counts, whose own sign is rounding
-# closer by.
+# Units of rounding to either side between which a value must be confirmed by counts, whose own sign is
+# rounding closer by.
 _CONFIRMED = 64.0
 
 
