@@ -189,8 +189,8 @@ def _sweep(own: Path) -> None:
             found = folder.lstat()
             ours = stat.S_ISDIR(found.st_mode) and found.st_uid == os.getuid()
             old = time.time() - found.st_mtime > _STALE_AFTER
-            names = {entry.name for entry in folder.iterdir()} if ours and old else {""}
-            if names <= {_SOCKET, _LOG} and not _answers(folder / _SOCKET):
+            names = {entry.name for entry in folder.iterdir()} if ours and old else set()
+            if _LOG in names and names <= {_SOCKET, _LOG} and not _answers(folder / _SOCKET):
                 shutil.rmtree(folder)
 
 

@@ -216,6 +216,7 @@ def test_what_a_killed_parent_left_is_swept_up(tmp_path: Path, monkeypatch: pyte
     kept = [
         folder("young", "service.log", old=False),
         folder("somebody-s", "service.log", "letters.txt"),
+        folder("empty"),
     ]
     served = folder("served")
     monkeypatch.chdir(served)
