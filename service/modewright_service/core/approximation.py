@@ -46,6 +46,8 @@ _SMALLEST_SPACINGS = 256.0
 # Elements that every later layer may count on, however greedy the ones before it are.
 _RESERVE = 16
 _LOOKS = 32
+# Share of a layer at which a coefficient is looked at beside an end where it is infinite.
+_JUST_INSIDE = 1e-6
 
 
 def _no_poll() -> None:
@@ -257,11 +259,17 @@ class _LayerTask:
 
     def _check_points(self, edges: FloatArray) -> None:
         """Refuse a coefficient that is infinite, or a p that is zero, at an end or a cut."""
+        shift = (self.ends[1] - self.ends[0]) * _JUST_INSIDE
         for source in self.sources:
             values = values_at(source, edges[:, np.newaxis], edges)
             centre, radius = values.centre[:, 0], values.radius[:, 0]
             for k in np.flatnonzero(~np.isfinite(radius)):
-                raise self._singular(source, float(edges[k]), "is not finite")
+                x = float(edges[k])
+                inside = np.array([x + (shift if k == 0 else -shift)])
+                if not np.isfinite(values_at(source, inside[:, np.newaxis], inside).radius).all():
+                    # Not a singular point but a stretch: the logarithm of a negative number, an overflow.
+                    raise undefined_error(source, x)
+                raise self._singular(source, x, "is not finite")
             if source.name == "p":
                 for k in np.flatnonzero(np.abs(centre) <= radius):
                     raise self._singular(source, float(edges[k]), "is zero")

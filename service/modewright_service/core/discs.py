@@ -61,6 +61,11 @@ def settled(disc: Disc) -> Disc:
     return Disc(np.where(good, disc.centre, 0), np.where(good, disc.radius, np.inf))
 
 
+def _underflow(centre: Array) -> Any:
+    """What a positive result that was rounded to zero may have been."""
+    return np.finfo(centre.dtype).tiny
+
+
 def _rounded(centre: Array, radius: Array, units: float = 1.0) -> Disc:
     return Disc(centre, (radius + units * unit(centre) * np.abs(centre)) * GUARD)
 
@@ -119,9 +124,12 @@ def power(a: Disc, exponent: float) -> Disc:
         safe = np.where(positive, size, 1)
         relative = safe**n * np.expm1(n * np.log1p(a.radius / safe))
         radius = np.where(positive, relative, a.radius**n if n else 0)
-        return _rounded(centre, radius, 2.0 * max(n, 1))
+        result = _rounded(centre, radius, 2.0 * max(n, 1))
+        if n and n % 2 == 0 and not np.iscomplexobj(a.centre):
+            return choose(_wide(a), _from_modulus(a, lambda y: y**n, 2.0 * n), result)
+        return result
     if not whole and exponent > 0 and not np.iscomplexobj(a.centre):
-        return _rising(a, lambda y: y**exponent, 2.0 * exponent + FUNCTION_UNITS)
+        return _monotone(a, lambda y: y**exponent, 2.0 * exponent + FUNCTION_UNITS, 0.0)
     off_cut = a if whole else _off_cut(a)
     size = np.abs(off_cut.centre)
     ratio = off_cut.radius / size
@@ -134,18 +142,34 @@ def power(a: Disc, exponent: float) -> Disc:
     return _rounded(centre, radius, 2.0 * s + FUNCTION_UNITS)
 
 
-def _rising(a: Disc, function: Callable[[Array], Array], units: float = FUNCTION_UNITS) -> Disc:
-    """An increasing function of real discs in [0, inf), the branch point included."""
-    least = low(a)
-    # An interval that begins at 0 was widened by the guard of the operations that made it.
-    inside = least >= -(2.0**-36) * high(a)
-    safe = np.where(inside, np.maximum(least, 0), 0)
-    centre = function(np.where(inside, np.maximum(a.centre, 0), 0))
-    most = function(np.where(inside, np.maximum(high(a), 0), 0))
-    radius = np.maximum(most - centre, centre - function(safe))
-    # The two ends carry roundings of their own.
-    radius = np.where(a.radius == 0, 0, radius + units * unit(a.centre) * most)
+def _wide(a: Disc) -> Array:
+    """Real intervals, not the rounding errors of points: their images are taken end by end."""
+    return a.radius > 2.0**-20 * (np.abs(a.centre) + a.radius)
+
+
+def _monotone(
+    a: Disc, function: Callable[[Array], Array], units: float = FUNCTION_UNITS, least: float = -np.inf
+) -> Disc:
+    """A monotone function of real discs in [least, inf): about its value for points, else end by end."""
+    # An interval that begins at the bound was widened by the guard of the operations that made it.
+    inside = low(a) >= least - 2.0**-36 * (high(a) - least if np.isfinite(least) else 0)
+    start, stop = np.maximum(low(a), least), np.maximum(high(a), least)
+    ends = function(np.where(inside, start, 1)), function(np.where(inside, stop, 1))
+    slack = units * unit(a.centre) * np.maximum(np.abs(ends[0]), np.abs(ends[1])) + _underflow(a.centre)
+    bottom, top = np.minimum(*ends) - slack, np.maximum(*ends) + slack
+    at_point = function(np.where(inside, np.maximum(a.centre, least), 1))
+    around = np.where(a.radius == 0, 0, np.maximum(top - at_point, at_point - bottom))
+    across = interval(bottom, top)
+    wide = _wide(a)
+    centre = np.where(wide, across.centre, at_point)
+    radius = np.where(wide, across.radius, around + _underflow(a.centre))
     return _rounded(centre, np.where(inside, radius, np.inf), units)
+
+
+def _from_modulus(a: Disc, function: Callable[[Array], Array], units: float = FUNCTION_UNITS) -> Disc:
+    """An even function, monotone on [0, inf), of wide real discs."""
+    bottom = np.maximum(np.maximum(low(a), -high(a)), 0)
+    return _monotone(interval(bottom, np.maximum(-low(a), high(a))), function, units, 0.0)
 
 
 def _off_cut(a: Disc) -> Disc:
@@ -157,11 +181,13 @@ def _off_cut(a: Disc) -> Disc:
 
 
 def exp(a: Disc) -> Disc:
+    if not np.iscomplexobj(a.centre):
+        return _monotone(a, np.exp)
     centre = np.exp(a.centre)
     # |exp z - exp c| <= exp(Re c + r) - |exp c|; the sum first, so that a large radius cannot meet 0 * inf.
     wide = np.exp(a.centre.real + a.radius)
     radius = np.where(a.radius > 1, wide, np.abs(centre) * np.expm1(np.minimum(a.radius, 1)))
-    return _rounded(centre, radius, FUNCTION_UNITS)
+    return _rounded(centre, radius + _underflow(centre), FUNCTION_UNITS)
 
 
 def log(a: Disc) -> Disc:
@@ -173,7 +199,7 @@ def log(a: Disc) -> Disc:
 
 def sqrt(a: Disc) -> Disc:
     if not np.iscomplexobj(a.centre):
-        return _rising(a, np.sqrt)
+        return _monotone(a, np.sqrt, least=0.0)
     a = _off_cut(a)
     centre = np.sqrt(a.centre)
     ratio = a.radius / np.abs(a.centre)
@@ -190,20 +216,33 @@ def _oscillating(value: Array, slope: Array, radius: Array) -> Disc:
     return _rounded(value, np.where(radius == 0, 0, grown), FUNCTION_UNITS)
 
 
+def _within_one(a: Disc, disc: Disc) -> Disc:
+    """``disc``, or [-1, 1] where it is wider than that and the argument is real."""
+    if np.iscomplexobj(a.centre):
+        return disc
+    beyond = (disc.radius >= 1) & np.isfinite(a.radius)
+    return Disc(np.where(beyond, 0, disc.centre), np.where(beyond, 1, disc.radius))
+
+
 def sin(a: Disc) -> Disc:
-    return _oscillating(np.sin(a.centre), np.cos(a.centre), a.radius)
+    return _within_one(a, _oscillating(np.sin(a.centre), np.cos(a.centre), a.radius))
 
 
 def cos(a: Disc) -> Disc:
-    return _oscillating(np.cos(a.centre), np.sin(a.centre), a.radius)
+    return _within_one(a, _oscillating(np.cos(a.centre), np.sin(a.centre), a.radius))
 
 
 def sinh(a: Disc) -> Disc:
+    if not np.iscomplexobj(a.centre):
+        return _monotone(a, np.sinh)
     return _oscillating(np.sinh(a.centre), np.cosh(a.centre), a.radius)
 
 
 def cosh(a: Disc) -> Disc:
-    return _oscillating(np.cosh(a.centre), np.sinh(a.centre), a.radius)
+    result = _oscillating(np.cosh(a.centre), np.sinh(a.centre), a.radius)
+    if np.iscomplexobj(a.centre):
+        return result
+    return choose(_wide(a), _from_modulus(a, np.cosh), result)
 
 
 def _tail(a: Disc) -> tuple[Array, Array, Array]:
@@ -219,6 +258,8 @@ def tanh(a: Disc) -> Disc:
     Near: tanh(c + z) - tanh c = sech^2(c) T / (1 + tanh(c) T), T = tanh z, |T| <= tan r. Far:
     tanh z = s (-1 + 2/(1 + E)), E = exp(-2 s z).
     """
+    if not np.iscomplexobj(a.centre):
+        return _monotone(a, np.tanh)
     centre = np.tanh(a.centre)
     _, small, spread = _tail(a)
     away = np.abs(1 + small)
@@ -251,11 +292,17 @@ def sech(a: Disc) -> Disc:
     centre = 2 * once / (1 + small)
     numerator = once_spread * away + np.abs(once) * spread
     radius = np.where(left > 0, 2 * numerator / (away * np.where(left > 0, left, 1)), np.inf)
-    return _rounded(centre, np.where(a.radius == 0, 0, radius), 2 * FUNCTION_UNITS)
+    radius = np.where(a.radius == 0, 0, radius) + _underflow(centre)
+    result = _rounded(centre, radius, 2 * FUNCTION_UNITS)
+    if np.iscomplexobj(a.centre):
+        return result
+    return choose(_wide(a), _from_modulus(a, lambda y: 1 / np.cosh(y)), result)
 
 
 def logistic(a: Disc) -> Disc:
     """1/(1 + exp(-z)) = (1 + tanh(z/2))/2, without losing its small values at the left."""
+    if not np.iscomplexobj(a.centre):
+        return _monotone(a, _real_logistic, 2 * FUNCTION_UNITS)
     half = tanh(Disc(a.centre / 2, a.radius / 2))
     side = np.where(a.centre.real < 0, -1.0, 1.0)
     small = np.exp(-side * a.centre)
@@ -266,8 +313,13 @@ def logistic(a: Disc) -> Disc:
     away = np.abs(1 + small)
     left = away - spread
     far = np.where(left > 0, spread / (away * np.where(left > 0, left, 1)), np.inf)
-    radius = np.where(a.radius == 0, 0, np.fmin(near, far))
+    radius = np.where(a.radius == 0, 0, np.fmin(near, far)) + _underflow(centre)
     return _rounded(centre, radius, 2 * FUNCTION_UNITS)
+
+
+def _real_logistic(y: Array) -> Array:
+    small = np.exp(-np.abs(y))
+    return np.asarray(np.where(y < 0, small, 1) / (1 + small))
 
 
 def hull(a: Disc, b: Disc) -> Disc:
