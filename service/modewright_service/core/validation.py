@@ -151,11 +151,8 @@ def _check_limits(problem: Problem, faults: _Faults) -> None:
 def _check_layers(problem: Problem, faults: _Faults) -> bool:
     before = len(faults.found)
     last = len(problem.layers) - 1
-    names: dict[str, int] = {}
     for index, layer in enumerate(problem.layers):
         path = f"layers[{index}]"
-        if layer.name and names.setdefault(layer.name, index) != index:
-            faults.add(Reason.LAYER_GAP, f"{path}.name", "two layers have this name", layer.name)
         ends_ok = True
         for value, field, outer in ((layer.start, "start", index == 0), (layer.end, "end", index == last)):
             if outer and isinstance(value, int | float) and math.isinf(value):
@@ -248,9 +245,13 @@ def _check_samples(samples: Samples, field: str, where: str, layer: Layer, fault
     except (TypeError, ValueError) as error:
         faults.add(Reason.BAD_SAMPLES, where, f"not a table of real numbers: {error}")
         return
-    if x.ndim != 1 or values.ndim != 1 or x.size != values.size:
-        message = "x and values must be two lists of one length"
-        faults.add(Reason.BAD_SAMPLES, where, message, f"{x.shape} and {values.shape}")
+    if x.ndim != 1 or values.ndim != 1:
+        name, array = ("x", x) if x.ndim != 1 else ("values", values)
+        faults.add(Reason.BAD_SAMPLES, f"{where}.{name}", "must be one list of numbers", str(array.shape))
+        return
+    if x.size != values.size:
+        message = f"there must be one for each of the {x.size} in x"
+        faults.add(Reason.BAD_SAMPLES, f"{where}.values", message, values.size)
         return
     if x.size > MAX_SAMPLES:
         faults.add(Reason.LIMIT_EXCEEDED, f"{where}.x", f"at most {MAX_SAMPLES} are accepted", x.size)
