@@ -404,7 +404,9 @@ def evaluate(chain: Chain, lam: Array) -> Evaluation:
     y, dy = _sweep_right(chain, k, lam)
     twist = _choose_twist(chain, k, lam, x, y)
     u, c = _vector(chain, k, lam, x, dx, y, dy, twist)
-    return Evaluation(count, twist.pivot / _mass(chain, k, u, c))
+    # a vector that lives in massless layers alone has no norm and gives no correction: bisection goes on
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return Evaluation(count, twist.pivot / _mass(chain, k, u, c))
 
 
 def eigenvectors(chain: Chain, lam: Array) -> Vectors:

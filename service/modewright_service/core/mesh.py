@@ -48,6 +48,8 @@ def top_for_phase(mesh: CoefficientMesh, phase: float, scale: float) -> float:
     def total(lam: float) -> float:
         return float((np.sqrt(np.maximum(lam * w - q, 0.0) / p) * dx).sum())
 
+    # where w = 0 lambda changes nothing, and a negative q would be a phase that no lambda gets below
+    q = np.where(w > 0.0, q, 0.0)
     low, high = 0.0, scale
     if total(low) >= phase:
         low, high = -scale, 0.0
