@@ -167,6 +167,19 @@ def test_restriction_keeps_the_function_and_its_bounds(name: str) -> None:
     )
 
 
+@pytest.mark.parametrize(
+    "text", ["abs(x-0.3)", "1-x**2", "x**2*(1-x)", "(x-0.6)**2*exp(x)", "0.7*(0.9-x)**2"]
+)
+@pytest.mark.parametrize("parts", [2, 3, 4, 7])
+def test_restriction_keeps_zeros_of_w_relative(text: str, parts: int) -> None:
+    mesh = approximate(problem(w=text, end=0.9 if "0.9" in text else 1.0))
+    shares = np.arange(parts)[:, np.newaxis] / parts
+    edges = np.append((mesh.edges[:-1] + shares * np.diff(mesh.edges)).T.ravel(), mesh.edges[-1])
+    once = restrict(mesh, edges)
+    twice = restrict(once, np.union1d(edges, (edges[1:] + edges[:-1]) / 2))
+    assert max(once.w_error.max(), twice.w_error.max()) < 5e-12
+
+
 def test_restriction_without_new_edges_is_the_identity() -> None:
     mesh = approximate(problem(p="1+x", w="2+sin(20*x)"))
     same = restrict(mesh, mesh.edges)

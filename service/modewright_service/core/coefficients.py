@@ -93,7 +93,9 @@ def restrict(mesh: CoefficientMesh, edges: FloatArray) -> CoefficientMesh:
     floor = positive_floor(w)
     with np.errstate(divide="ignore", invalid="ignore"):
         relative = np.where(w_change > 0, np.where(floor > 0, w_change / floor, np.inf), 0.0)
-    _keep_zeros(mesh, fine, parent, divided, relative, (shift, stretch))
+    # A zero at the end may have been rounded to either side of zero.
+    touching = np.flatnonzero((floor <= 1e-10 * w[:, 0]) & (w_change > 0))
+    _keep_zeros(mesh, fine, parent, divided, touching, relative, (shift, stretch))
     fine.w_error[divided] += relative
     return fine
 
@@ -156,11 +158,12 @@ def _keep_zeros(
     fine: CoefficientMesh,
     parent: IntArray,
     divided: IntArray,
+    touching: IntArray,
     relative: FloatArray,
     maps: tuple[Any, Any],
 ) -> None:
     """Where the parent's w vanishes exactly at an end, its outermost part must do so too."""
-    for position in np.flatnonzero(~np.isfinite(relative)):
+    for position in touching:
         element = divided[position]
         above = parent[element]
         for side, shared in (
