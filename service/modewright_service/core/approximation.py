@@ -25,7 +25,7 @@ from .description import Constant, Expression, FloatArray, Layer, Problem
 from .errors import CoreError, Reason, Unsupported
 from .evaluation import constant_value
 from .expressions import parse
-from .fitting import Fit, Source, fit, make_source, negative_error, undefined_error, values_at
+from .fitting import Fit, Source, fit, joined, make_source, negative_error, undefined_error, values_at
 from .legendre import UNIT
 from .problem import resolve
 from .validation import has_mass, zero_weight_error
@@ -46,6 +46,8 @@ _SMALLEST_SPACINGS = 256.0
 # Elements that every later layer may count on, however greedy the ones before it are.
 _RESERVE = 16
 _LOOKS = 32
+# Elements fitted at once: the discs of a batch then take a few megabytes.
+_BATCH = 2048
 # Share of a layer at which a coefficient is looked at beside an end where it is infinite.
 _JUST_INSIDE = 1e-6
 
@@ -227,8 +229,7 @@ class _LayerTask:
         lows, highs = edges[:-1], edges[1:]
         smallest = (right - left) * _SMALLEST_SHARE
         while lows.size:
-            poll()
-            fits = self._fitted(lows, highs)
+            fits = self._fitted(lows, highs, poll)
             good = fits["p"].good & fits["q"].good & fits["w"].good
             spacing = _SMALLEST_SPACINGS * np.spacing(np.maximum(np.abs(lows), np.abs(highs)))
             small = highs - lows <= np.maximum(smallest, spacing)
@@ -237,7 +238,9 @@ class _LayerTask:
             if rows.count + len(lows) + int(halve.sum()) > self.budget:
                 halve[:] = False
             done = ~halve
-            rows.add(lows[done], highs[done], self.index, {n: _rows_of(f, done) for n, f in fits.items()})
+            rows.add(
+                lows[done], highs[done], self.index, {name: found.rows(done) for name, found in fits.items()}
+            )
             lows, highs = lows[halve], highs[halve]
             middle = lows + (highs - lows) / 2
             lows, highs = np.concatenate((lows, middle)), np.concatenate((middle, highs))
@@ -298,19 +301,24 @@ class _LayerTask:
                     raise self._singular(source, nearest, "is zero")
                 raise undefined_error(source, nearest)
 
-    def _fitted(self, lows: FloatArray, highs: FloatArray) -> dict[str, Fit]:
-        return {
-            source.name: fit(
-                source,
-                lows,
-                highs,
-                tolerance=self.tolerance,
-                scale=self.scale,
-                most_degree=self.max_degree,
-                opened=self._opened(source, lows, highs),
-            )
-            for source in self.sources
-        }
+    def _fitted(self, lows: FloatArray, highs: FloatArray, poll: Poll) -> dict[str, Fit]:
+        found: dict[str, list[Fit]] = {name: [] for name in _NAMES}
+        for start in range(0, len(lows), _BATCH):
+            poll()
+            left, right = lows[start : start + _BATCH], highs[start : start + _BATCH]
+            for source in self.sources:
+                found[source.name].append(
+                    fit(
+                        source,
+                        left,
+                        right,
+                        tolerance=self.tolerance,
+                        scale=self.scale,
+                        most_degree=self.max_degree,
+                        opened=self._opened(source, left, right),
+                    )
+                )
+        return {name: joined(fits) for name, fits in found.items()}
 
     def _opened(self, source: Source, lows: FloatArray, highs: FloatArray) -> Any:
         opened = np.zeros(lows.shape, dtype=bool)
@@ -319,31 +327,21 @@ class _LayerTask:
         return opened
 
 
-def _rows_of(fitted: Fit, chosen: Any) -> Fit:
-    return Fit(
-        fitted.series[chosen],
-        fitted.absolute[chosen],
-        fitted.relative[chosen],
-        fitted.good[chosen],
-        fitted.floor[chosen],
-    )
-
-
 def _assembled(rows: _Rows, edges: FloatArray) -> CoefficientMesh:
     left = np.concatenate(rows.left)
     order = np.argsort(left, kind="stable")
-    series = {name: np.concatenate([f.series for f in rows.fits[name]])[order] for name in _NAMES}
-    relative = {name: np.concatenate([f.relative for f in rows.fits[name]])[order] for name in _NAMES}
-    absolute = {name: np.concatenate([f.absolute for f in rows.fits[name]])[order] for name in _NAMES}
-    used = max(int(np.flatnonzero(c.any(axis=0)).max(initial=0)) for c in series.values())
+    fits = {name: joined(rows.fits[name]).rows(order) for name in _NAMES}
+    used = max(
+        int(np.flatnonzero(c.any(axis=0)).max(initial=0)) for c in (found.series for found in fits.values())
+    )
     return CoefficientMesh(
         np.append(left[order], edges[-1]),
         np.array(rows.layer, dtype=np.int64)[order],
-        np.ascontiguousarray(series["p"][:, : used + 1]),
-        np.ascontiguousarray(series["q"][:, : used + 1]),
-        np.ascontiguousarray(series["w"][:, : used + 1]),
-        relative["p"],
-        absolute["q"],
-        relative["w"],
-        absolute["w"],
+        np.ascontiguousarray(fits["p"].series[:, : used + 1]),
+        np.ascontiguousarray(fits["q"].series[:, : used + 1]),
+        np.ascontiguousarray(fits["w"].series[:, : used + 1]),
+        fits["p"].relative,
+        fits["q"].absolute,
+        fits["w"].relative,
+        fits["w"].absolute,
     )

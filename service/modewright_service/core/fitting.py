@@ -12,6 +12,7 @@ The error of the polynomial that is handed out has four parts, each bounded on i
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from fractions import Fraction
 from typing import Any
@@ -94,6 +95,22 @@ class Fit:
     relative: FloatArray
     good: Array
     floor: FloatArray
+
+    def rows(self, chosen: Array) -> Fit:
+        """The fit of the chosen elements (an index or a mask)."""
+        parts = (self.series, self.absolute, self.relative, self.good, self.floor)
+        return Fit(*(part[chosen] for part in parts))
+
+
+def joined(fits: Sequence[Fit]) -> Fit:
+    """Fits of several batches as one."""
+    return Fit(
+        np.concatenate([found.series for found in fits]),
+        np.concatenate([found.absolute for found in fits]),
+        np.concatenate([found.relative for found in fits]),
+        np.concatenate([found.good for found in fits]),
+        np.concatenate([found.floor for found in fits]),
+    )
 
 
 def make_source(
