@@ -18,6 +18,9 @@ __all__ = ["FluxDefect", "Modes", "flux_defects", "interior_zeros", "make_modes"
 
 Array = NDArray[np.float64]
 
+# Decaying tails keep their relative accuracy down to here; below, doubles lose digits.
+_FADED = 1e-280
+
 
 @dataclass(frozen=True, eq=False)
 class Modes:
@@ -156,9 +159,11 @@ def interior_zeros(chain: Chain, modes: Modes, legendre: Array) -> NDArray[np.in
     vander = np.polynomial.legendre.legvander(t, k)
     coefficients = legendre.reshape(legendre.shape[0], el.count, k + 1)
     samples = np.matmul(coefficients, vander.T)
-    # what is below the rounding of its own element has no sign and takes the one before it
+    # what is below the rounding of its own element, or decayed to the end of the range of doubles, has no
+    # sign and takes the one before it
     peak = np.max(np.abs(samples), axis=2, keepdims=True)
-    signs = np.where(np.abs(samples) > 1e-12 * peak, np.sign(samples), 0.0).reshape(legendre.shape[0], -1)
+    signs = np.where(np.abs(samples) > np.maximum(1e-12 * peak, _FADED), np.sign(samples), 0.0)
+    signs = signs.reshape(legendre.shape[0], -1)
     if chain.left_node == 1:
         signs = np.concatenate([np.sign(modes.nodes[:1].T), signs], axis=1)
     if chain.right_node < chain.links:

@@ -148,10 +148,11 @@ def _resolve_top(
     """A chain that resolves a lambda below which at least `wanted` eigenvalues lie, and that lambda."""
     phase = (wanted + 1.0) * np.pi
     found = 0
+    floor = -scale
     for _ in range(60):
         poll()
         top = top_for_phase(coefficients, phase, scale)
-        low = min(-scale, top_for_phase(coefficients, 1e-6, scale))
+        low = min(floor, top_for_phase(coefficients, 1e-6, scale))
         degree, radians = (
             (chosen.degree, chosen.phase) if chosen.degree else choose_degree(coefficients, low, top)
         )
@@ -159,10 +160,15 @@ def _resolve_top(
         least = int(np.ceil(1.5 * (wanted + 2) / (degree - 1)))
         mesh = refine_for(coefficients, low, top, radians, least, chosen.max_elements)
         chain = build_chain(build_elements(mesh, degree), resolved, poll)
-        found = int(_system(chain).count(np.array([top]))[0])
-        if found >= wanted:
+        system = _system(chain)
+        bound_below, found = (int(n) for n in system.count(np.array([low, top])))
+        if bound_below > 0:
+            # what an end or a spring binds below the potential decays faster than the mesh was made for
+            floor = floor_below(system, scale)
+        elif found >= wanted:
             return chain, top
-        phase += (wanted - found + 0.5) * np.pi
+        else:
+            phase += (wanted - found + 0.5) * np.pi
     raise NotConverged.at(
         Reason.NOT_CONVERGED,
         "modes",
