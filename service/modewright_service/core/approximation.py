@@ -22,7 +22,7 @@ import numpy as np
 from .coefficients import CoefficientMesh, Ranges, ranges, restrict
 from .cuts import find_cuts
 from .description import Constant, Expression, FloatArray, Layer, Problem
-from .errors import CoreError, Reason, Unsupported
+from .errors import CoreError, InvalidProblem, Reason, Unsupported
 from .evaluation import constant_value
 from .expressions import parse
 from .fitting import Fit, Source, fit, joined, make_source, negative_error, undefined_error, values_at
@@ -101,7 +101,7 @@ def approximate(
     power = problem.geometry.power
     parts: list[_Part] = []
     for index, layer in enumerate(problem.layers):
-        constants = _constants(layer) if power == 0 else None
+        constants = _constants(layer, index) if power == 0 else None
         parts.append(constants or _sources(layer, index, power, max_degree))
     scales = _q_scales(parts, edges)
     rows = _Rows()
@@ -130,7 +130,7 @@ def approximate(
     return mesh
 
 
-def _constants(layer: Layer) -> list[tuple[float, float]] | None:
+def _constants(layer: Layer, index: int) -> list[tuple[float, float]] | None:
     """(value, relative error) of p, q, w where all three are constant; None if one is not."""
     found = []
     for name in _NAMES:
@@ -140,8 +140,10 @@ def _constants(layer: Layer) -> list[tuple[float, float]] | None:
         elif isinstance(coefficient, Expression):
             program = parse(coefficient.text)
             known = constant_value(program)
-            if known is None or not math.isfinite(known):
+            if known is None:
                 return None
+            if not math.isfinite(known):
+                raise InvalidProblem.at(Reason.NOT_FINITE, f"layers[{index}].{name}", "must be finite", known)
             value, error = known, 0.0 if len(program.steps) == 1 else 2 * UNIT
         else:
             return None

@@ -1,0 +1,1 @@
+"""The numerical core: free of I/O, of gRPC and of protobuf."""
