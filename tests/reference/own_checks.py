@@ -28,19 +28,19 @@ def element_values(record: Record, e: int, t: NDArray[np.float64]) -> NDArray[np
 
 
 def count_zeros(record: Record) -> NDArray[np.int64]:
-    """(modes,): changes of sign along the domain, of the values at dense interior points of every element.
+    """(modes,): changes of sign along the domain, of the values at dense points of every element, ends
+    included.
 
     A solution has a bounded number of zeros an element (its degree), and Chebyshev points several times
-    denser separate them; values that are noise are left out, so a change across a resistance counts as
-    one.
+    denser separate them; values that are noise are left out, so that a fixed end is none and a change
+    across a resistance counts as one.
     """
     last = np.zeros(record.count)
     changes = np.zeros(record.count, dtype=np.int64)
     largest = np.zeros(record.count)
     values = []
     for e, degree in enumerate(record.degrees):
-        count = _SAMPLES_PER_DEGREE * (int(degree) + 1)
-        t = -np.cos((np.arange(count) + 0.5) * np.pi / count)
+        t = -np.cos(np.linspace(0.0, np.pi, _SAMPLES_PER_DEGREE * (int(degree) + 1)))
         values.append(element_values(record, e, t))
         largest = np.maximum(largest, np.abs(values[-1]).max(axis=1))
     for block in values:
