@@ -70,7 +70,7 @@ def test_close_pairs(resistance: float, service: modewright.Service) -> None:
 @pytest.mark.parametrize("potential", [0.0, 2.0, -2.0, 500.0])
 @pytest.mark.parametrize("place", ["left", "middle"])
 def test_massless_layers(place: str, potential: float, service: modewright.Service) -> None:
-    """w = 0 on a layer with a potential in it; a negative one is weak enough for a lowest eigenvalue to exist."""
+    """w = 0 on a layer with a potential in it; negative ones weak enough for a lowest eigenvalue."""
     hollow = {"w": 0.0, "q": potential}
     if place == "left":
         layers = [_layer(0.0, 0.3, **hollow), _layer(0.3, 1.0)]
@@ -119,7 +119,7 @@ def test_a_deep_well_in_a_wide_domain(modes: int, service: modewright.Service) -
 
 
 def test_a_contrast_of_seventeen_decades(service: modewright.Service) -> None:
-    """p w = 1: in t = integral of dx/p, up to T, the equation is -u'' = lambda u, so lambda = (n pi / T)^2."""
+    """p w = 1: in t = integral of dx/p, 0 < t < T, it is -u'' = lambda u, so lambda = (n pi / T)^2."""
     document = {
         "layers": [_layer(0.0, 1.0, p="exp(20*x)", w="exp(-20*x)")],
         "left": FREE,
