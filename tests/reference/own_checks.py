@@ -15,8 +15,10 @@ from numpy.typing import NDArray
 
 from modewright.record import Record
 
-# Below this share of its largest value a mode is rounding noise: behind a barrier it decays past 1e-16.
-_NOISE = 1e-11
+# Below this share of its largest value on an element a mode is rounding noise there (a fixed end, the
+# inner end of a steep decay), and below the other it has decayed to the end of the range of doubles.
+_NOISE = 1e-12
+_NOTHING = 1e-280
 _SAMPLES_PER_DEGREE = 6
 
 
@@ -37,14 +39,13 @@ def count_zeros(record: Record) -> NDArray[np.int64]:
     """
     last = np.zeros(record.count)
     changes = np.zeros(record.count, dtype=np.int64)
-    largest = np.zeros(record.count)
     values = []
     for e, degree in enumerate(record.degrees):
         t = -np.cos(np.linspace(0.0, np.pi, _SAMPLES_PER_DEGREE * (int(degree) + 1)))
         values.append(element_values(record, e, t))
-        largest = np.maximum(largest, np.abs(values[-1]).max(axis=1))
     for block in values:
-        signs = np.where(np.abs(block) > _NOISE * largest[:, None], np.sign(block), 0.0)
+        floor = np.maximum(_NOISE * np.abs(block).max(axis=1, keepdims=True), _NOTHING)
+        signs = np.where(np.abs(block) > floor, np.sign(block), 0.0)
         # Carry the last sign over noise, so that each column holds the sign seen last.
         seen = np.concatenate([last[:, None], signs], axis=1)
         where = np.maximum.accumulate(np.where(seen != 0.0, np.arange(seen.shape[1]), 0), axis=1)
