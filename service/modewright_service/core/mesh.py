@@ -35,7 +35,8 @@ def fundamental(mesh: CoefficientMesh) -> float:
     """Lambda = (pi / int sqrt(w/p) dx)^2; where w = 0 everywhere, (pi / b - a)^2 p in the mean instead."""
     p, _, w, dx = _sampled(mesh)
     travel = float((np.sqrt(np.maximum(w, 0.0) / p) * dx).sum())
-    return (np.pi / travel) ** 2 if travel > 0.0 else 0.0
+    with np.errstate(over="ignore", under="ignore"):
+        return float(np.square(np.float64(np.pi / travel))) if travel > 0.0 else 0.0
 
 
 def top_for_phase(mesh: CoefficientMesh, phase: float, scale: float) -> float:

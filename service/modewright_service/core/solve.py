@@ -23,7 +23,7 @@ from modewright_service.core.clusters import OpenChain
 from modewright_service.core.condensed import Chain, build_chain
 from modewright_service.core.digest import ALGORITHM_VERSION, basis_key, problem_digest
 from modewright_service.core.elements import build_elements
-from modewright_service.core.errors import NotConverged, Reason, SpectrumExhausted
+from modewright_service.core.errors import InvalidProblem, NotConverged, Reason, SpectrumExhausted
 from modewright_service.core.mesh import (
     bisect_elements,
     choose_degree,
@@ -73,6 +73,8 @@ def _nothing() -> None:
 
 # The share of the tolerance that the discretisation may use up; rounding and coefficients have the rest.
 _SHARE = 0.1
+# Lambda beyond this or its inverse leaves no room for the squares and products of a solve.
+_SMALLEST_SCALE = 1e-200
 
 
 def solve(
@@ -95,35 +97,55 @@ def solve(
     validate(problem)
     resolved = resolve(problem)
     coefficients = approximate(problem, poll=poll)
-    scale = fundamental(coefficients)
-    if scale == 0.0:
+    if not coefficients.w.any():
         raise SpectrumExhausted.at(
             Reason.SPECTRUM_EXHAUSTED,
             "modes",
             "w is zero in every layer: only lumped masses carry lambda",
             str(count),
         )
+    scale = fundamental(coefficients)
+    if not _SMALLEST_SCALE <= scale <= 1.0 / _SMALLEST_SCALE:
+        message = "lambda would be of the size of Lambda = (pi / int sqrt(w/p) dx)^2: use other units"
+        raise InvalidProblem.at(Reason.BAD_DOMAIN, "layers", message, scale)
+    try:
+        result = _adapt(coefficients, resolved, count, rtol, scale, chosen, poll)
+    except np.linalg.LinAlgError as error:
+        largest = int(np.argmax(np.abs(coefficients.q).max(axis=1)))
+        raise NotConverged.at(
+            Reason.NOT_CONVERGED,
+            f"layers[{coefficients.layer[largest]}].q",
+            "too large to be solved with, or negative where w is zero: no lowest eigenvalue was found",
+            float(coefficients.q[largest, 0]),
+        ) from error
+    return _record(problem, resolved, result, count, rtol, scale, time.perf_counter() - started)
+
+
+def _adapt(
+    coefficients: CoefficientMesh,
+    resolved: Resolved,
+    count: int,
+    rtol: float,
+    scale: float,
+    chosen: SolveOptions,
+    poll: Callable[[], None],
+) -> _Pass:
+    """The first mesh, then elements halved where a bound needs it, as often as the options allow."""
     wanted = count + _spare(count)
-    mesh, top = coefficients, scale
-    result: _Pass | None = None
-    for attempt in range(chosen.passes + 1):
-        if result is None:
-            chain, top = _resolve_top(coefficients, resolved, wanted, scale, chosen, poll)
-        else:
-            marked = _marked(result, count, rtol, scale)
-            elements = result.mesh.edges.size - 1
-            if not marked.any() or elements + int(marked.sum()) > chosen.max_elements:
-                break
-            mesh = bisect_elements(result.mesh, marked)
-            degree = result.chain.elements.reference.degree
-            chain = build_chain(build_elements(mesh, degree), resolved, poll)
-            top = _top_of(chain, wanted, top)
+    chain, top = _resolve_top(coefficients, resolved, wanted, scale, chosen, poll)
+    poll()
+    result = _one_pass(chain, resolved, count, wanted, top, scale, poll)
+    for _ in range(chosen.passes):
+        marked = _marked(result, count, rtol, scale)
+        elements = result.mesh.edges.size - 1
+        if not marked.any() or elements + int(marked.sum()) > chosen.max_elements:
+            break
+        degree = result.chain.elements.reference.degree
+        chain = build_chain(build_elements(bisect_elements(result.mesh, marked), degree), resolved, poll)
+        top = _top_of(chain, wanted, top)
         poll()
         result = _one_pass(chain, resolved, count, wanted, top, scale, poll)
-        if attempt == chosen.passes:
-            break
-    assert result is not None
-    return _record(problem, resolved, result, count, rtol, scale, time.perf_counter() - started)
+    return result
 
 
 def _system(chain: Chain) -> System:
