@@ -228,6 +228,18 @@ PROBLEMS: dict[str, tuple[Document, Bad]] = {
         _document(geometry="spherical", layers_0_start=-0.1),
         Bad(InvalidProblem, "BAD_DOMAIN", "layers[0].start", "-0.1"),
     ),
+    "a length of nothing": (
+        {"layers": [{"start": 0.0, "end": 1e-300}], "left": GOOD["left"], "right": GOOD["right"]},
+        Bad(InvalidProblem, "BAD_DOMAIN", "layers", "inf"),
+    ),
+    "a length beyond all units": (
+        {"layers": [{"start": 0.0, "end": 1e200}], "left": GOOD["left"], "right": GOOD["right"]},
+        Bad(InvalidProblem, "BAD_DOMAIN", "layers", "0.0"),
+    ),
+    "a massless layer that nothing holds": (
+        _document(layers_0_w=0.0, layers_0_q=-2500.0),
+        Bad(modewright.NotConverged, "NOT_CONVERGED", "layers[0].q", "-2500"),
+    ),
     "an unknown geometry": (
         _document(geometry="toroidal"),
         Bad(InvalidProblem, "", "geometry", "toroidal"),

@@ -131,7 +131,7 @@ def test_a_contrast_of_seventeen_decades(service: modewright.Service) -> None:
     np.testing.assert_array_equal(basis.zeros, np.arange(12))
 
 
-@pytest.mark.parametrize("shift", [1e2, -1e3, 1e4, -1e5, 1e5])
+@pytest.mark.parametrize("shift", [1e2, -1e3, 1e4, -1e6, 1e8, -1e12])
 def test_a_shifted_potential(shift: float, service: modewright.Service) -> None:
     """q = c moves every eigenvalue by c and leaves zeros and relative widths alone."""
     document = {"layers": [_layer(0.0, 1.0, q=shift)], "left": FIXED, "right": FIXED}
@@ -141,3 +141,19 @@ def test_a_shifted_potential(shift: float, service: modewright.Service) -> None:
     size = np.maximum(np.abs(exact), basis.scale)
     assert float(np.max((basis.upper - basis.lower) / size)) <= 1e-9
     np.testing.assert_array_equal(basis.zeros, np.arange(12))
+
+
+@pytest.mark.parametrize("sign", [1.0, -1.0])
+def test_a_large_potential_that_varies(sign: float, service: modewright.Service) -> None:
+    """An offset of 1e5 under a varying potential and weight, on layers one of which is massless."""
+    layers = [
+        _layer(0.0, 0.5, q=f"{sign}*1e5*(1+0.1*x)", w="1+x"),
+        _layer(0.5, 0.6, q=3.0 * sign, w=0.0),
+        _layer(0.6, 1.0, p=3.0, q=f"{sign}*1e5*exp(-x/10)", w=0.7),
+    ]
+    document = {"layers": layers, "left": FIXED, "right": {"kind": "film", "film": 2.0}}
+    basis = _solve(service, document, 12)
+    dense = solve_dense(dense_from_document(document, pieces=24), 12, degree=30)
+    _assert_right(basis, dense.eigenvalues, granted=1e-13)
+    pieces = basis.pieces()
+    assert pieces.coefficient("q", 0.25) == pytest.approx(sign * 1e5 * 1.025, rel=1e-14)

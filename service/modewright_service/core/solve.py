@@ -11,13 +11,13 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from modewright.record import EndInfo, Record
-from modewright_service.core.approximation import CoefficientMesh, approximate
+from modewright_service.core.approximation import CoefficientMesh, approximate, restrict
 from modewright_service.core.bounds import Bounds, bound
 from modewright_service.core.clusters import OpenChain
 from modewright_service.core.condensed import Chain, build_chain
@@ -75,6 +75,7 @@ def _nothing() -> None:
 _SHARE = 0.1
 # Lambda beyond this or its inverse leaves no room for the squares and products of a solve.
 _SMALLEST_SCALE = 1e-200
+_EPS = float(np.finfo(float).eps)
 
 
 def solve(
@@ -108,8 +109,9 @@ def solve(
     if not _SMALLEST_SCALE <= scale <= 1.0 / _SMALLEST_SCALE:
         message = "lambda would be of the size of Lambda = (pi / int sqrt(w/p) dx)^2: use other units"
         raise InvalidProblem.at(Reason.BAD_DOMAIN, "layers", message, scale)
+    moved, shift = (coefficients, 0.0) if _has_mass(resolved) else _without_offset(coefficients, scale)
     try:
-        result = _adapt(coefficients, resolved, count, rtol, scale, chosen, poll)
+        result = _adapt(moved, resolved, count, rtol, scale, chosen, poll)
     except np.linalg.LinAlgError as error:
         largest = int(np.argmax(np.abs(coefficients.q).max(axis=1)))
         raise NotConverged.at(
@@ -118,7 +120,46 @@ def solve(
             "too large to be solved with, or negative where w is zero: no lowest eigenvalue was found",
             float(coefficients.q[largest, 0]),
         ) from error
-    return _record(problem, resolved, result, count, rtol, scale, time.perf_counter() - started)
+    record = _record(problem, resolved, result, count, rtol, scale, time.perf_counter() - started)
+    return record if shift == 0.0 else _moved_back(record, shift, coefficients)
+
+
+def _without_offset(mesh: CoefficientMesh, scale: float) -> tuple[CoefficientMesh, float]:
+    """The mesh with q - c w for q, and c, where q has an offset of more than `scale`; else as it is, and 0.
+
+    Then lambda - c is solved for, with a mesh and bounds that know nothing of the offset. c is the number
+    nearest to 0 between the least and the largest q / w, so that |q - c w| is nowhere larger than |q|.
+    """
+    t = np.linspace(-1.0, 1.0, 2 * mesh.q.shape[1] + 1)
+    vander = np.polynomial.legendre.legvander(t, mesh.q.shape[1] - 1).T
+    q, w = mesh.q @ vander, mesh.w @ vander
+    heavy = w > 0.0
+    with np.errstate(over="ignore"):
+        ratio = q[heavy] / w[heavy]
+    c = float(np.clip(0.0, ratio.min(), ratio.max()))
+    if not scale < abs(c) < np.inf:
+        return mesh, 0.0
+    rounding = 2.0 * _EPS * (np.abs(mesh.q).sum(axis=1) + abs(c) * np.abs(mesh.w).sum(axis=1))
+    error = mesh.q_error + abs(c) * mesh.w_absolute + rounding
+    return replace(mesh, q=mesh.q - c * mesh.w, q_error=error), c
+
+
+def _moved_back(record: Record, c: float, coefficients: CoefficientMesh) -> Record:
+    """The record of q from that of q - c w."""
+    rounding = _EPS * (np.abs(record.eigenvalues) + abs(c))
+    return replace(
+        record,
+        eigenvalues=record.eigenvalues + c,
+        lower=record.lower + c - rounding,
+        upper=record.upper + c + rounding,
+        q=restrict(coefficients, record.edges).q,
+    )
+
+
+def _has_mass(resolved: Resolved) -> bool:
+    """Whether something else than w carries lambda."""
+    ends = _has_lump(resolved.left) or _has_lump(resolved.right)
+    return ends or any(joint.mass > 0.0 for joint in resolved.joints)
 
 
 def _adapt(
