@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Sequence
 
 import numpy as np
@@ -32,7 +33,7 @@ def layered(
             Constant(float(potentials[i])),
             Constant(float(w[i])),
         )
-        for i, (a, b) in enumerate(zip(edges[:-1], edges[1:], strict=True))
+        for i, (a, b) in enumerate(itertools.pairwise(edges))
     )
     return Problem(layers, left or Dirichlet(), right or Dirichlet(), tuple(interfaces))
 

@@ -33,23 +33,31 @@ NO_RETRIES = [("grpc.enable_retries", 0), ("grpc.max_receive_message_length", 16
 
 
 class Running:
-    """A service on a loop of its own in a thread of this process, with a channel to it."""
+    """A service on a loop of its own in a thread of this process, with a channel to it.
 
-    def __init__(self, folder: Path, **settings: Any) -> None:
-        self.address = f"unix:{folder / 'service.sock'}"
+    credentials: of the channel, for a service with TLS.
+    """
+
+    def __init__(
+        self, folder: Path, credentials: grpc.ChannelCredentials | None = None, **settings: Any
+    ) -> None:
+        listen = settings.pop("listen", f"unix:{folder / 'service.sock'}")
         given = {"workers": 1, "worker_nice": 0, "drain_seconds": 0.0, "grace_seconds": 5.0, **settings}
-        self.settings = Settings(listen=self.address, spool=folder / "spool", **given)
+        self.settings = Settings(listen=listen, spool=folder / "spool", **given)
         self._loop = asyncio.new_event_loop()
         self._thread = threading.Thread(target=self._loop.run_forever)
         self._thread.start()
         self.service: Service = self.run(self._start())
-        self.channel = grpc.insecure_channel(self.address, NO_RETRIES)
+        if credentials is None:
+            self.channel = grpc.insecure_channel(self.address, NO_RETRIES)
+        else:
+            self.channel = grpc.secure_channel(self.address, credentials, NO_RETRIES)
         self.stub = EigenbasisServiceStub(self.channel)
         until(lambda: len(self.service.pool.pids) == self.settings.slots)
 
     async def _start(self) -> Service:
         service = Service(self.settings, hire(self.settings))
-        await service.start()
+        self.address = await service.start()
         return service
 
     def run(self, work: Coroutine[Any, Any, T]) -> T:
@@ -69,9 +77,11 @@ class Running:
 
 
 @contextlib.contextmanager
-def running(folder: Path, **settings: Any) -> Iterator[Running]:
+def running(
+    folder: Path, credentials: grpc.ChannelCredentials | None = None, **settings: Any
+) -> Iterator[Running]:
     """A service in this process."""
-    service = Running(folder, **settings)
+    service = Running(folder, credentials, **settings)
     try:
         yield service
     finally:
