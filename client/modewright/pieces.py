@@ -153,7 +153,7 @@ class Pieces:
             # Few fields, many points: first one piecewise polynomial for each field.
             out = self._series(flat @ modes, points, quantity, side)
         else:
-            out = np.empty((flat.shape[0], points.size), dtype=flat.dtype)
+            out = np.empty((flat.shape[0], points.size), dtype=np.result_type(flat, modes))
             for chunk in _slices(points.size):
                 out[:, chunk] = flat @ self._series(modes, points[chunk], quantity, side)
         return out.reshape(c.shape[:-1] + shape)

@@ -59,6 +59,7 @@ _ARRAYS: Final[Mapping[str, str]] = {
     "right_lump": "<f8",
     "joints": "<f8",
 }
+_COMPLEX: Final = "<c16"
 _PER_MODE: Final = (
     *("eigenvalues", "lower", "upper", "zeros", "groups", "confirmed"),
     *("coefficients", "left_lump", "right_lump"),
@@ -100,7 +101,8 @@ class Record:
     algorithm_version, problem_digest, basis_key: where it is from; projected coefficients belong to a key.
     rtol: the relative tolerance that it was solved for (relative to max(|lambda|, scale)).
     eigenvalues, lower, upper: (N,), ascending; lower <= eigenvalue <= upper.
-    zeros: (N,) int64, interior zeros, a change of sign across a resistance counting as one.
+    zeros: (N,) int64, interior zeros, a change of sign across a resistance counting as one; for coupled ends
+        those of a <= x < b; -1 for complex modes.
     groups: (N,) int64; neighbours with the same number cannot be told apart.
     confirmed: (N,) uint8; 1: a comparison problem confirms the index, 0: only the discrete count does.
     scale: Lambda = (pi / int sqrt(w/p) dx)^2.
@@ -108,7 +110,8 @@ class Record:
     layer_names: names of the layers from left to right.
     edges: (E+1,) ascending ends of the elements. layer: (E,) int32, the layer that each element is in.
     degrees: (E,) int32, the polynomial degree k_e of the modes on each element.
-    coefficients: (N, S), S = sum(k_e + 1): Legendre coefficients of mode n, element after element, in
+    coefficients: (N, S) float64, or complex128 where the ends are coupled with a phase; S = sum(k_e + 1):
+        Legendre coefficients of mode n, element after element, in
         t = (2 x - a - b) / (b - a) on element (a, b).
     p, q, w: (E, d+1) Legendre coefficients of what the modes were computed with (d may differ).
     left, right: the two ends.
@@ -137,7 +140,7 @@ class Record:
     edges: NDArray[np.float64]
     layer: NDArray[np.int32]
     degrees: NDArray[np.int32]
-    coefficients: NDArray[np.float64]
+    coefficients: NDArray[Any]
     p: NDArray[np.float64]
     q: NDArray[np.float64]
     w: NDArray[np.float64]
@@ -150,8 +153,9 @@ class Record:
     solve_seconds: float = 0.0
 
     def __post_init__(self) -> None:
-        for name, dtype in _ARRAYS.items():
-            array = np.ascontiguousarray(getattr(self, name), dtype=np.dtype(dtype)).view()
+        for name in _ARRAYS:
+            given = getattr(self, name)
+            array = np.ascontiguousarray(given, dtype=np.dtype(_stored(name, given))).view()
             array.flags.writeable = False
             object.__setattr__(self, name, array)
         object.__setattr__(self, "layer_names", tuple(self.layer_names))
@@ -232,7 +236,8 @@ class Record:
         for item in fields(self):
             if item.name not in _ARRAYS and item.name != "solve_seconds":
                 scalars[item.name] = _pack(getattr(self, item.name))
-        directory = [[name, dtype, list(getattr(self, name).shape)] for name, dtype in _ARRAYS.items()]
+        types = {name: _stored(name, getattr(self, name)) for name in _ARRAYS}
+        directory = [[name, dtype, list(getattr(self, name).shape)] for name, dtype in types.items()]
         header = json.dumps(
             {"arrays": directory, "fields": scalars},
             sort_keys=True,
@@ -242,7 +247,7 @@ class Record:
         ).encode("ascii")
         parts = [_PREFIX.pack(_MAGIC, FORMAT_VERSION, len(header)), header]
         position = len(parts[0]) + len(header)
-        for name, dtype in _ARRAYS.items():
+        for name, dtype in types.items():
             padding = -position % _ALIGNMENT
             payload = getattr(self, name).astype(dtype, copy=False).tobytes()
             parts += [bytes(padding), payload]
@@ -266,7 +271,7 @@ class Record:
             scalars = {name: _unpack(value) for name, value in header["fields"].items()}
             arrays: dict[str, Any] = {}
             for name, dtype, shape in header["arrays"]:
-                if _ARRAYS.get(name) != dtype:
+                if dtype not in (_ARRAYS.get(name), _COMPLEX if name == "coefficients" else None):
                     raise RecordError(f"unknown array {name!r} of type {dtype!r}")
                 position += -position % _ALIGNMENT
                 arrays[name], position = _read_array(view, position, name, np.dtype(dtype), shape)
@@ -280,6 +285,11 @@ class Record:
 
     def __reduce__(self) -> tuple[Callable[..., Record], tuple[bytes, float]]:
         return _restore, (self.to_bytes(), self.solve_seconds)
+
+
+def _stored(name: str, array: Any) -> str:
+    """The type that an array is written with: complex is kept where modes may be complex."""
+    return _COMPLEX if name == "coefficients" and np.iscomplexobj(array) else _ARRAYS[name]
 
 
 def _restore(data: bytes, solve_seconds: float) -> Record:

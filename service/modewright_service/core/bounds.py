@@ -24,6 +24,7 @@ from numpy.typing import NDArray
 
 from modewright_service.core.approximation import CoefficientMesh, ranges
 from modewright_service.core.comparison import Comparison, build_comparison
+from modewright_service.core.condensed import Field
 from modewright_service.core.modes import FluxDefect
 from modewright_service.core.problem import Resolved
 
@@ -103,16 +104,17 @@ def bound(
     degree: int,
     scale: float,
     poll: Callable[[], None],
+    first: int = 0,
 ) -> Bounds:
     """Bounds of the first `count` of T > count Ritz values `lam`.
 
-    scale: Lambda. degree: of the elements (rounding grows with it).
+    scale: Lambda. degree: of the elements (rounding grows with it). first: index of lam[0].
     """
     extra = coefficient_terms(mesh, lam)
-    index = np.arange(lam.size)
+    index = first + np.arange(lam.size)
     rounding = 10.0 * 0.5 * _EPS * ((degree + index) * defect.energy + degree * scale)
     shift, part = _shift(lam, mesh, resolved, scale)
-    nu = _thresholds(lam, count, mesh, resolved, scale, poll)
+    nu = _thresholds(lam, count, mesh, resolved, scale, poll, first)
     if shift is None:
         lower = np.full(count, -np.inf)
         size = np.zeros(count)
@@ -130,14 +132,22 @@ def bound(
 
 @dataclass(frozen=True, eq=False)
 class _Thresholds:
-    """nu: ascending trial numbers; count: (K,) exact counts of the comparison problem below them."""
+    """nu: ascending trial numbers; count: (K,) exact counts of the comparison problem below them, less the
+    index of the first Ritz value.
+    """
 
     nu: Array
     count: IntArray
 
 
 def _thresholds(
-    lam: Array, count: int, mesh: CoefficientMesh, resolved: Resolved, scale: float, poll: Callable[[], None]
+    lam: Array,
+    count: int,
+    mesh: CoefficientMesh,
+    resolved: Resolved,
+    scale: float,
+    poll: Callable[[], None],
+    first: int,
 ) -> _Thresholds:
     """Counts at trial points inside the gaps, the comparison refined until the gaps above count are met."""
     gaps = np.diff(lam)
@@ -159,7 +169,7 @@ def _thresholds(
             unmet &= one_each & (wanted % 3 == 0)
         open_trials = np.flatnonzero(unmet)
         counted[open_trials] = np.minimum(
-            counted[open_trials], comparison.count(trials[open_trials], poll=poll)
+            counted[open_trials], comparison.count(trials[open_trials], poll=poll) - first
         )
         poll()
         # an index is served when some gap above it, at most a block away, is met
@@ -225,7 +235,7 @@ def _shift(lam: Array, mesh: CoefficientMesh, resolved: Resolved, scale: float) 
 
 
 def _lehmann_goerisch(
-    lam: Array, count: int, scaled: Array, thresholds: _Thresholds, shift: float, part: float
+    lam: Array, count: int, scaled: Field, thresholds: _Thresholds, shift: float, part: float
 ) -> tuple[Array, Array]:
     """(lower bounds, the distance Ritz value - bound before rounding), -inf where no nu serves."""
     best = np.full(count, -np.inf)
@@ -236,7 +246,7 @@ def _lehmann_goerisch(
     nu_of[wanted[met]] = thresholds.nu[met]
     rho = lam + shift
     offsets = [
-        np.einsum("tg,tg->t", scaled[: lam.size - o], scaled[o:]) if o < lam.size else np.zeros(0)
+        np.einsum("tg,tg->t", scaled[: lam.size - o].conj(), scaled[o:]) if o < lam.size else np.zeros(0)
         for o in range(_BLOCK)
     ]
     for size in range(1, _BLOCK + 1):
@@ -251,7 +261,7 @@ def _lehmann_goerisch(
         members = first[:, None] + np.arange(size)
         r = rho[members]
         gap = nu[:, None] - r
-        block = np.zeros((first.size, size, size))
+        block = np.zeros((first.size, size, size), dtype=scaled.dtype)
         for i in range(size):
             for j in range(i, size):
                 gram = offsets[j - i][first + i]
@@ -259,7 +269,7 @@ def _lehmann_goerisch(
                 value = nu**2 * gram / (part * r[:, i] * r[:, j] * root)
                 block[:, i, j] += value
                 if i != j:
-                    block[:, j, i] += value
+                    block[:, j, i] += value.conj()
         # z - (nu - rho_i)/rho_i as the largest eigenvalue of the shifted block keeps small defects visible
         base = gap[:, 0] / r[:, 0]
         for i in range(size):

@@ -9,11 +9,15 @@ every element of the discretisation:
     count(nu) <= m   implies   lambda_m >= nu.
 
 The state is (u, p u') with u >= 0, rescaled freely; a change of sign adds one to the count.
+
+Coupled ends, u(b) = e^{i theta} u(a): with u(a) = 0 there is one condition more, so that coupling adds at
+most one to the count of that problem (one negative pivot), and does so exactly if (tr M - 2 cos theta) / M_12
+< 0 for the matrix M that carries (u, p u') from a to b; M_12 has the sign of (-1)^zeros.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -37,7 +41,7 @@ class Comparison:
 
     length, p, q: (P,). w_lower, w_upper: (P,), used for nu < 0 and nu >= 0. resistance, spring, mass: (P,)
     point terms at the right end of each piece (the mass and spring before the resistance). left, right: the
-    ends.
+    ends. factor: u(b) / u(a) where they are coupled.
     """
 
     length: Array
@@ -50,6 +54,7 @@ class Comparison:
     mass: Array
     left: EndTerm
     right: EndTerm
+    factor: complex | None = None
 
     @property
     def pieces(self) -> int:
@@ -58,7 +63,9 @@ class Comparison:
     def count(self, nu: Array, *, fraction: float = 1.0, poll: Callable[[], None] | None = None) -> IntArray:
         """(T,) eigenvalues below each nu; fraction multiplies p and 1/R (a bound of part of the energy)."""
         with np.errstate(over="ignore", under="ignore"):
-            return _count(self, np.asarray(nu, dtype=np.float64), fraction, poll)
+            values = np.asarray(nu, dtype=np.float64)
+            count = _count(self, values, fraction, poll)
+            return count if self.factor is None else count + _closing(self, values, fraction, count, poll)
 
 
 def build_comparison(mesh: CoefficientMesh, resolved: Resolved, cuts: IntArray) -> Comparison:
@@ -77,23 +84,65 @@ def build_comparison(mesh: CoefficientMesh, resolved: Resolved, cuts: IntArray) 
         bounds.w_upper,
         *(resistance, spring, mass),
         *(resolved.left, resolved.right),
+        resolved.factor,
     )
 
 
 def _count(c: Comparison, nu: Array, fraction: float, poll: Callable[[], None] | None) -> IntArray:
     count = np.zeros(nu.size, dtype=np.int64)
-    u, v = _start(c.left, nu, fraction, count)
-    negative = nu < 0.0
-    for j in range(c.pieces):
-        if poll is not None and j % _POLL_EVERY == 0:
-            poll()
-        load = c.q[j] - nu * np.where(negative, c.w_lower[j], c.w_upper[j])
+    fixed = EndTerm(dirichlet=True)
+    left, right = (c.left, c.right) if c.factor is None else (fixed, fixed)
+    u, v = _start(left, nu, fraction, count)
+    for j, load in _loads(c, nu, poll):
         u, v = _advance(u, v, c.length[j], fraction * c.p[j], load, count)
         if c.spring[j] != 0.0 or c.mass[j] != 0.0:
             v = v + (c.spring[j] - nu * c.mass[j]) * u
         if c.resistance[j] > 0.0:
             u, v = _through(u, v, c.resistance[j] / fraction, count)
-    return _finish(c.right, nu, fraction, u, v, count)
+    return _finish(right, nu, fraction, u, v, count)
+
+
+def _loads(c: Comparison, nu: Array, poll: Callable[[], None] | None) -> Iterator[tuple[int, Array]]:
+    """Pieces from left to right with q - nu w (T,) on each."""
+    negative = nu < 0.0
+    for j in range(c.pieces):
+        if poll is not None and j % _POLL_EVERY == 0:
+            poll()
+        yield j, c.q[j] - nu * np.where(negative, c.w_lower[j], c.w_upper[j])
+
+
+def _closing(
+    c: Comparison, nu: Array, fraction: float, zeros: IntArray, poll: Callable[[], None] | None
+) -> IntArray:
+    """(T,) 1 where coupling the ends adds an eigenvalue to the `zeros` with u(a) = u(b) = 0."""
+    # u and p u' of the solutions that start as (1, 0) and (0, 1), over e^log
+    m = np.zeros((2, 2, nu.size))
+    m[0, 0] = m[1, 1] = 1.0
+    log = np.zeros(nu.size)
+    for j, load in _loads(c, nu, poll):
+        h, p = c.length[j], fraction * c.p[j]
+        square = -load / p
+        root = np.sqrt(np.abs(square))
+        phase = root * h
+        small = phase < 1e-8
+        root = np.where(small, 1.0, root)
+        turning = (square > 0.0) & ~small
+        tangent = np.tanh(phase)
+        # a decaying piece is divided by its cosh
+        diagonal = np.where(turning, np.cos(phase), 1.0)
+        over = np.where(small, h / p, np.where(turning, np.sin(phase), tangent) / (p * root))
+        under = np.where(small, h * load, np.where(turning, -np.sin(phase), tangent) * (p * root))
+        log += np.where(turning | small, 0.0, phase + np.log1p(np.exp(-2.0 * phase)) - np.log(2.0))
+        m = np.stack([diagonal * m[0] + over * m[1], under * m[0] + diagonal * m[1]])
+        m[1] += (c.spring[j] - nu * c.mass[j]) * m[0]
+        m[0] += c.resistance[j] / fraction * m[1]
+        # rows have different units: a common factor keeps them within range
+        size = np.abs(m).max(axis=(0, 1))
+        m /= size
+        log += np.log(size)
+    cosine = complex(c.factor or 1.0).real
+    trace = m[0, 0] + m[1, 1] - 2.0 * cosine * np.exp(np.minimum(-log, 700.0))
+    return np.asarray(trace * np.where(zeros % 2 == 0, 1.0, -1.0) < 0.0, dtype=np.int64)
 
 
 def _start(end: EndTerm, nu: Array, fraction: float, count: IntArray) -> tuple[Array, Array]:

@@ -23,6 +23,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -34,6 +35,7 @@ from modewright_service.core.problem import Resolved
 __all__ = [
     "Chain",
     "Evaluation",
+    "Field",
     "Links",
     "Vectors",
     "away_from_zero",
@@ -42,10 +44,13 @@ __all__ = [
     "count_below",
     "eigenvectors",
     "evaluate",
+    "expand",
     "sweep_left",
 ]
 
 Array = NDArray[np.float64]
+# Amplitudes: complex where the ends are coupled with a phase.
+Field = NDArray[Any]
 IntArray = NDArray[np.int64]
 
 # Numbers of one temporary array (targets x elements x bubbles) that are handled together: 32 MB.
@@ -66,6 +71,7 @@ class Chain:
     left_node: first node that lies on the interval (1 where a lump hangs behind a resistance), right_node
         likewise.
     poll: called between batches of work; may raise.
+    factor: u(b) = factor u(a) and p u' likewise, |factor| = 1, where the ends are coupled; else None.
     """
 
     elements: Elements
@@ -78,6 +84,7 @@ class Chain:
     left_node: int
     right_node: int
     poll: Callable[[], None] = _nothing
+    factor: complex | None = None
 
     @property
     def links(self) -> int:
@@ -100,8 +107,8 @@ class Vectors:
     vertex functions. step: (T,) the last Newton correction, not yet applied.
     """
 
-    nodes: Array
-    bubbles: Array
+    nodes: Field
+    bubbles: Field
     step: Array
 
 
@@ -156,6 +163,7 @@ def build_chain(elements: Elements, resolved: Resolved, poll: Callable[[], None]
         left_node,
         right_node,
         poll,
+        resolved.factor,
     )
 
 
@@ -420,6 +428,11 @@ def eigenvectors(chain: Chain, lam: Array) -> Vectors:
     step = twist.pivot / norm2
     scale = 1.0 / np.sqrt(norm2)
     u, c = u * scale, c * scale
+    return Vectors(u, expand(chain, lam, u, c), step)
+
+
+def expand(chain: Chain, lam: Array, u: Field, c: Field) -> Field:
+    """(E, T, J) bubble amplitudes that go with node values u (n+1, T) and pole amplitudes c (n, T)."""
     el = chain.elements
     at = np.flatnonzero(chain.element_of_link >= 0)
     l = lam[None, :] + el.shift[:, None]  # noqa: E741
@@ -427,6 +440,6 @@ def eigenvectors(chain: Chain, lam: Array) -> Vectors:
     pick = np.argmin(np.abs(den), axis=2)[:, :, None]
     np.put_along_axis(den, pick, np.inf, axis=2)
     driven = u[at][:, :, None] * el.mass[:, None, :, 0] + u[at + 1][:, :, None] * el.mass[:, None, :, 1]
-    bubbles = l[:, :, None] * driven / den
+    bubbles: Field = l[:, :, None] * driven / den
     np.put_along_axis(bubbles, pick, c[at][:, :, None], axis=2)
-    return Vectors(u, bubbles, step)
+    return bubbles

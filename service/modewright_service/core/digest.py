@@ -21,6 +21,7 @@ from modewright_service.core.description import Coefficient, Constant, Expressio
 from modewright_service.core.errors import InvalidProblem, InvalidRequest, Reason
 from modewright_service.core.expressions import parse
 from modewright_service.core.problem import EndTerm, Problem, resolve
+from modewright_service.core.selection import Lowest, Selection
 
 __all__ = [
     "ALGORITHM_VERSION",
@@ -31,6 +32,7 @@ __all__ = [
     "problem_digest",
     "rtol_rung",
     "rung",
+    "selection_key",
 ]
 
 # Raised whenever equal requests may be answered with other numbers than before.
@@ -115,6 +117,9 @@ def canonical_bytes(problem: Problem) -> bytes:
     out.integer(len(resolved.joints))
     for joint in resolved.joints:
         out.numbers([joint.x, joint.resistance, joint.spring, joint.mass])
+    if resolved.factor is not None:
+        out.text("coupled")
+        out.numbers([resolved.factor.real, resolved.factor.imag])
     return b"".join(out.parts)
 
 
@@ -161,4 +166,20 @@ def basis_key(digest: str, modes: int, rtol: float) -> str:
     out.text(ALGORITHM_VERSION)
     out.integer(modes)
     out.numbers([rtol])
+    return hashlib.sha256(b"".join(out.parts)).hexdigest()
+
+
+def selection_key(digest: str, selection: Selection, rtol: float) -> str:
+    """Key of a selection of the problem with this digest, at the rung rtol: that of :func:`basis_key` for the
+    lowest, whose number must be a rung.
+    """
+    if isinstance(selection, Lowest):
+        return basis_key(digest, selection.count, rtol)
+    out = _Writer()
+    out.text(_BASIS_SCHEMA)
+    out.text(digest)
+    out.text(ALGORITHM_VERSION)
+    word, numbers = selection.canonical
+    out.text(word)
+    out.numbers([*numbers, rtol])
     return hashlib.sha256(b"".join(out.parts)).hexdigest()

@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from modewright_service.core.approximation import CoefficientMesh, restrict
 
-__all__ = ["bisect_elements", "choose_degree", "fundamental", "refine_for", "top_for_phase"]
+__all__ = ["bisect_elements", "choose_degree", "fundamental", "phase_at", "refine_for", "top_for_phase"]
 
 Array = NDArray[np.float64]
 
@@ -39,29 +39,29 @@ def fundamental(mesh: CoefficientMesh) -> float:
         return float(np.square(np.float64(np.pi / travel))) if travel > 0.0 else 0.0
 
 
+def phase_at(mesh: CoefficientMesh, lam: float) -> float:
+    """int sqrt((lambda w - q)+ / p) dx; layers of w = 0, where lambda changes nothing, count for nothing."""
+    p, q, w, dx = _sampled(mesh)
+    q = np.where(w > 0.0, q, 0.0)
+    return float((np.sqrt(np.maximum(lam * w - q, 0.0) / p) * dx).sum())
+
+
 def top_for_phase(mesh: CoefficientMesh, phase: float, scale: float) -> float:
     """The lambda at which int sqrt((lambda w - q)+ / p) dx reaches `phase`.
 
     Divided by pi, that integral is about the number of eigenvalues below lambda.
     """
-    p, q, w, dx = _sampled(mesh)
-
-    def total(lam: float) -> float:
-        return float((np.sqrt(np.maximum(lam * w - q, 0.0) / p) * dx).sum())
-
-    # where w = 0 lambda changes nothing, and a negative q would be a phase that no lambda gets below
-    q = np.where(w > 0.0, q, 0.0)
     low, high = 0.0, scale
-    if total(low) >= phase:
+    if phase_at(mesh, low) >= phase:
         low, high = -scale, 0.0
-        while total(low) >= phase:
+        while phase_at(mesh, low) >= phase:
             low, high = 2.0 * low, low
     else:
-        while total(high) < phase:
+        while phase_at(mesh, high) < phase:
             low, high = high, 2.0 * high
     for _ in range(60):
         middle = 0.5 * (low + high)
-        low, high = (middle, high) if total(middle) < phase else (low, middle)
+        low, high = (middle, high) if phase_at(mesh, middle) < phase else (low, middle)
     return high
 
 

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from modewright_service.core.condensed import Chain, Vectors
+from modewright_service.core.condensed import Chain, Field, Vectors
 
 __all__ = ["FluxDefect", "Modes", "flux_defects", "interior_zeros", "make_modes"]
 
@@ -27,12 +27,13 @@ class Modes:
     """T normalised modes.
 
     shapes: (E, T, k+1) coefficients of the element shape functions. nodes: (n+1, T) values on the chain.
+    Complex where the ends are coupled with a phase.
     """
 
-    shapes: Array
-    nodes: Array
+    shapes: Field
+    nodes: Field
 
-    def legendre(self, to_legendre: Array) -> Array:
+    def legendre(self, to_legendre: Array) -> Field:
         """(T, E (k+1)) Legendre coefficients, element after element."""
         values = np.matmul(self.shapes, to_legendre)
         return np.ascontiguousarray(np.swapaxes(values, 0, 1)).reshape(values.shape[1], -1)
@@ -49,30 +50,42 @@ def make_modes(chain: Chain, vectors: Vectors) -> Modes:
     bubbles = np.matmul(amplitudes, np.swapaxes(el.modes, 1, 2))
     shapes = np.concatenate([left[:, :, None], right[:, :, None], bubbles], axis=2)
     nodes = vectors.nodes
-    factor = 1.0 / _norms(chain, shapes, nodes)
-    factor = factor * _signs(chain, shapes, nodes)
+    factor = _signs(chain, shapes, nodes) / _norms(chain, shapes, nodes)
     return Modes(shapes * factor[None, :, None], nodes * factor)
 
 
-def _norms(chain: Chain, shapes: Array, nodes: Array) -> Array:
+def _norms(chain: Chain, shapes: Field, nodes: Field) -> Array:
     """(T,) norms by quadrature, point masses included."""
     el = chain.elements
     values = np.matmul(shapes, el.reference.values.T)
     weights = el.w * (el.reference.weights * el.half[:, None])
-    norm2: Array = np.einsum("etg,eg->t", values * values, weights) + (chain.mass[:, None] * nodes**2).sum(
-        axis=0
-    )
+    norm2: Array = np.einsum("etg,eg->t", _square(values), weights)
+    norm2 += (chain.mass[:, None] * _square(nodes)).sum(axis=0)
     return np.sqrt(norm2)
 
 
-def _signs(chain: Chain, shapes: Array, nodes: Array) -> Array:
-    """+-1 so that u > 0 right of the left end, or p u' > 0 where u vanishes there."""
+def _square(values: Field) -> Array:
+    """|values|^2."""
+    result: Array = values.real**2 + values.imag**2 if np.iscomplexobj(values) else values * values
+    return result
+
+
+def _signs(chain: Chain, shapes: Field, nodes: Field) -> Field:
+    """+-1, or a phase factor, so that u > 0 right of the left end, or p u' > 0 there where u vanishes."""
+    # slope at t = -1 of the shape functions of the first element
+    slope = shapes[0] @ _end_slopes(chain.elements.reference.degree, -1.0)
     if chain.left_fixed:
-        # slope at t = -1 of the shape functions of the first element
-        slopes = _end_slopes(chain.elements.reference.degree, -1.0)
-        lead = shapes[0] @ slopes
+        lead = slope
     else:
         lead = nodes[chain.left_node]
+        if chain.factor is not None:
+            # the second of an equal pair is made to vanish at the seam
+            peak = np.abs(shapes[0] @ chain.elements.reference.values.T).max(axis=1)
+            lead = np.where(np.abs(lead) > 1e-6 * peak, lead, slope)
+    if np.iscomplexobj(lead):
+        size = np.abs(lead)
+        phase: Field = np.where(size > 0.0, lead.conj() / np.where(size > 0.0, size, 1.0), 1.0)
+        return phase
     return np.where(lead < 0.0, -1.0, 1.0)
 
 
@@ -90,7 +103,7 @@ class FluxDefect:
     by_element: (T, E) the elements' shares of int d^2 / p.
     """
 
-    scaled: Array
+    scaled: Field
     energy: Array
     by_element: Array
 
@@ -112,18 +125,18 @@ def flux_defects(chain: Chain, lam: Array, modes: Modes) -> FluxDefect:
     sigma = start[:, :, None] + np.matmul(load, ref.antiderivative.T) * el.half[:, None, None]
     root = np.sqrt(weights / el.p)
     defect = (sigma - flux) * root[:, None, :]
-    by_element = np.einsum("etg,etg->te", defect, defect)
+    by_element = _square(defect).sum(axis=2).T
     scaled = np.swapaxes(defect, 0, 1).reshape(lam.size, -1)
 
-    energy = np.einsum("etg,eg->t", flux * flux, weights / el.p)
-    energy += np.einsum("etg,eg->t", u * u, weights * np.abs(el.q))
-    energy += (np.abs(chain.stiffness)[:, None] * modes.nodes**2).sum(axis=0)
+    energy = np.einsum("etg,eg->t", _square(flux), weights / el.p)
+    energy += np.einsum("etg,eg->t", _square(u), weights * np.abs(el.q))
+    energy += (np.abs(chain.stiffness)[:, None] * _square(modes.nodes)).sum(axis=0)
     resistances = np.flatnonzero(chain.element_of_link < 0)
-    jumps = np.zeros((lam.size, resistances.size))
+    jumps = np.zeros((lam.size, resistances.size), dtype=scaled.dtype)
     end_flux = start + np.einsum("etg,eg->et", load, weights)
     for column, j in enumerate(resistances):
         through = chain.conductance[j] * (modes.nodes[j + 1] - modes.nodes[j])
-        energy += through**2 / chain.conductance[j]
+        energy += _square(through) / chain.conductance[j]
         jumps[:, column] = (_joint_flux(chain, lam, modes, start, end_flux, at, int(j)) - through) / np.sqrt(
             chain.conductance[j]
         )
@@ -131,15 +144,15 @@ def flux_defects(chain: Chain, lam: Array, modes: Modes) -> FluxDefect:
 
 
 def _joint_flux(
-    chain: Chain, lam: Array, modes: Modes, start: Array, end_flux: Array, at: NDArray[np.int64], j: int
-) -> Array:
+    chain: Chain, lam: Array, modes: Modes, start: Field, end_flux: Field, at: NDArray[np.int64], j: int
+) -> Field:
     """(T,) flux through resistance link j: of the element right of it, or from the lump behind it."""
     follower = np.flatnonzero(at == j + 1)
     # the point terms of a node between a resistance and an element make sigma jump by (S - lambda m) u
     if follower.size:
         node = j + 1
         terms = chain.stiffness[node] - lam * chain.mass[node]
-        flux: Array = start[follower[0]] - terms * modes.nodes[node]
+        flux: Field = start[follower[0]] - terms * modes.nodes[node]
         return flux
     leader = np.flatnonzero(at == j - 1)
     terms = chain.stiffness[j] - lam * chain.mass[j]
@@ -147,12 +160,16 @@ def _joint_flux(
     return flux
 
 
-def interior_zeros(chain: Chain, modes: Modes, legendre: Array) -> NDArray[np.int64]:
+def interior_zeros(chain: Chain, modes: Modes, legendre: Field) -> NDArray[np.int64]:
     """(T,) sign changes inside the interval, one across a resistance included, counted on the polynomials.
 
     legendre: what :meth:`Modes.legendre` returned. Sampled at 2 k + 3 Chebyshev-Lobatto points an element,
     more than twice as dense as the zeros that a polynomial of degree k with some twenty radians can have.
+    With coupled ends those of a <= x < b, the change from b to a counting where there is one; -1 for complex
+    modes, which have none.
     """
+    if np.iscomplexobj(legendre):
+        return np.full(legendre.shape[0], -1, dtype=np.int64)
     el = chain.elements
     k = el.reference.degree
     t = -np.cos(np.pi * np.arange(2 * k + 3) / (2 * k + 2))
@@ -171,4 +188,7 @@ def interior_zeros(chain: Chain, modes: Modes, legendre: Array) -> NDArray[np.in
     last = np.maximum.accumulate(np.where(signs != 0.0, np.arange(signs.shape[1]), 0), axis=1)
     filled = np.take_along_axis(signs, last, axis=1)
     changes = np.count_nonzero(filled[:, 1:] * filled[:, :-1] < 0.0, axis=1)
+    if chain.factor is not None:
+        first = np.take_along_axis(signs, np.argmax(signs != 0.0, axis=1)[:, None], axis=1)[:, 0]
+        changes += chain.factor.real * filled[:, -1] * first < 0.0
     return np.asarray(changes, dtype=np.int64)

@@ -6,6 +6,7 @@ under one name.
 
 from __future__ import annotations
 
+import cmath
 from dataclasses import dataclass
 
 import numpy as np
@@ -89,12 +90,16 @@ class Joint:
 
 @dataclass(frozen=True, eq=False)
 class Resolved:
-    """``layer_edges`` (L+1,) ascending; the two ends; the joints ordered by x."""
+    """``layer_edges`` (L+1,) ascending; the two ends; the joints ordered by x.
+
+    ``factor``: u(b) = factor u(a) and p u' likewise where the ends are coupled, of modulus 1; else None.
+    """
 
     layer_edges: FloatArray
     left: EndTerm
     right: EndTerm
     joints: tuple[Joint, ...]
+    factor: complex | None = None
 
 
 def _end_term(end: End, side: str, factor: float) -> EndTerm:
@@ -124,6 +129,20 @@ def _end_term(end: End, side: str, factor: float) -> EndTerm:
             )
 
 
+def _factor(coupling: Coupling | None) -> complex | None:
+    match coupling:
+        case None:
+            return None
+        case Coupling(CouplingKind.PERIODIC):
+            return 1.0 + 0.0j
+        case Coupling(CouplingKind.ANTIPERIODIC):
+            return -1.0 + 0.0j
+        case Coupling(_, phase):
+            value = cmath.exp(1j * phase)
+            # multiples of pi are real up to the rounding of pi itself
+            return complex(round(value.real)) if abs(value.imag) < 1e-15 * max(1.0, abs(phase)) else value
+
+
 def resolve(problem: Problem) -> Resolved:
     """Ends and joints of a validated problem with the factor r^g of their places applied.
 
@@ -134,14 +153,16 @@ def resolve(problem: Problem) -> Resolved:
     """
     edges = layer_edges(problem)
     power = problem.geometry.power
-    left = _end_term(problem.left, "left", abs(edges[0]) ** power)
-    right = _end_term(problem.right, "right", abs(edges[-1]) ** power)
+    factor = _factor(problem.coupling)
+    if problem.coupling is not None:
+        left = right = EndTerm(kind=str(problem.coupling.kind))
+    else:
+        left = _end_term(problem.left, "left", abs(edges[0]) ** power)
+        right = _end_term(problem.right, "right", abs(edges[-1]) ** power)
     joints = []
     for interface in problem.interfaces:
         x = snapped_interface(interface.x, edges)
-        factor = abs(x) ** power
-        joints.append(
-            Joint(x, interface.resistance / factor, interface.spring * factor, interface.mass * factor)
-        )
+        area = abs(x) ** power
+        joints.append(Joint(x, interface.resistance / area, interface.spring * area, interface.mass * area))
     joints.sort(key=lambda joint: joint.x)
-    return Resolved(np.asarray(edges, dtype=np.float64), left, right, tuple(joints))
+    return Resolved(np.asarray(edges, dtype=np.float64), left, right, tuple(joints), factor)

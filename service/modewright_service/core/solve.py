@@ -1,4 +1,4 @@
-"""Solve: from a problem to the record of its lowest eigenpairs.
+"""Solve: from a problem to the record of the eigenpairs selected.
 
 Coefficients become polynomials on a mesh (:mod:`.approximation`), the mesh is refined until the highest
 lambda is resolved in every layer (:mod:`.mesh`), elements are decomposed once (:mod:`.elements`), eigenvalues
@@ -21,19 +21,36 @@ from modewright_service.core.approximation import CoefficientMesh, approximate, 
 from modewright_service.core.bounds import Bounds, bound
 from modewright_service.core.clusters import OpenChain
 from modewright_service.core.condensed import Chain, build_chain
-from modewright_service.core.digest import ALGORITHM_VERSION, basis_key, problem_digest
+from modewright_service.core.digest import ALGORITHM_VERSION, problem_digest, selection_key
 from modewright_service.core.elements import build_elements
-from modewright_service.core.errors import InvalidProblem, NotConverged, Reason, SpectrumExhausted
+from modewright_service.core.errors import (
+    CoreError,
+    InvalidProblem,
+    InvalidRequest,
+    NotConverged,
+    Reason,
+    SpectrumExhausted,
+)
 from modewright_service.core.mesh import (
     bisect_elements,
     choose_degree,
     fundamental,
+    phase_at,
     refine_for,
     top_for_phase,
 )
 from modewright_service.core.modes import FluxDefect, Modes, flux_defects, interior_zeros, make_modes
 from modewright_service.core.problem import EndTerm, Problem, Resolved, resolve, validate
-from modewright_service.core.spectrum import System, floor_below, lowest
+from modewright_service.core.rings import Ring
+from modewright_service.core.selection import (
+    Below,
+    IndexRange,
+    Lowest,
+    Selection,
+    Window,
+    check_selection,
+)
+from modewright_service.core.spectrum import System, eigenvalues, floor_below
 
 __all__ = ["SolveOptions", "solve"]
 
@@ -47,18 +64,22 @@ class SolveOptions:
     degree: of the polynomials on each element, at least 2; 0 chooses it, and the phase, by cost.
     phase: radians of the highest mode that an element may hold.
     max_elements: refinement stops there. passes: halvings after the first solve.
+    max_modes: a selection that holds more is refused.
     """
 
     degree: int = 0
     phase: float = 20.0
     max_elements: int = 20_000
     passes: int = 8
+    max_modes: int = 100_000
 
 
 @dataclass(frozen=True, eq=False)
 class _Pass:
-    """What one mesh gave."""
+    """What one mesh gave; first: the index of the first mode, count: how many were asked for."""
 
+    first: int
+    count: int
     mesh: CoefficientMesh
     chain: Chain
     values: Array
@@ -80,21 +101,25 @@ _EPS = float(np.finfo(float).eps)
 
 def solve(
     problem: Problem,
-    count: int,
+    selection: Selection | int,
     rtol: float,
     *,
     options: SolveOptions | None = None,
     poll: Callable[[], None] = _nothing,
 ) -> Record:
-    """The `count` lowest eigenpairs of `problem`, none missed, each with bounds.
+    """The eigenpairs of `problem` that `selection` names (a number: so many of the lowest), none missed, each
+    with bounds.
 
     rtol: width wanted for every pair of bounds, relative to max(|lambda|, Lambda); where rounding does not
     allow it the bounds are as wide as they have to be. poll is called inside the loops and may raise.
 
-    Raises InvalidProblem, Unsupported, SpectrumExhausted, NotConverged, and whatever poll raises.
+    Raises InvalidProblem, InvalidRequest, Unsupported, SpectrumExhausted, NotConverged, and whatever poll
+    raises.
     """
     started = time.perf_counter()
     chosen = options or SolveOptions()
+    wish = Lowest(selection) if isinstance(selection, int) else selection
+    check_selection(wish)
     validate(problem)
     resolved = resolve(problem)
     coefficients = approximate(problem, poll=poll)
@@ -103,7 +128,7 @@ def solve(
             Reason.SPECTRUM_EXHAUSTED,
             "modes",
             "w is zero in every layer: only lumped masses carry lambda",
-            str(count),
+            _asked(wish),
         )
     scale = fundamental(coefficients)
     if not _SMALLEST_SCALE <= scale <= 1.0 / _SMALLEST_SCALE:
@@ -111,7 +136,7 @@ def solve(
         raise InvalidProblem.at(Reason.BAD_DOMAIN, "layers", message, scale)
     moved, shift = (coefficients, 0.0) if _has_mass(resolved) else _without_offset(coefficients, scale)
     try:
-        result = _adapt(moved, resolved, count, rtol, scale, chosen, poll)
+        result = _adapt(moved, resolved, _moved(wish, -shift), rtol, scale, chosen, poll)
     except np.linalg.LinAlgError as error:
         largest = int(np.argmax(np.abs(coefficients.q).max(axis=1)))
         raise NotConverged.at(
@@ -120,7 +145,7 @@ def solve(
             "too large to be solved with, or negative where w is zero: no lowest eigenvalue was found",
             float(coefficients.q[largest, 0]),
         ) from error
-    record = _record(problem, resolved, result, count, rtol, scale, time.perf_counter() - started)
+    record = _record(problem, resolved, result, wish, rtol, scale, time.perf_counter() - started)
     return record if shift == 0.0 else _moved_back(record, shift, coefficients)
 
 
@@ -162,35 +187,70 @@ def _has_mass(resolved: Resolved) -> bool:
     return ends or any(joint.mass > 0.0 for joint in resolved.joints)
 
 
+def _asked(selection: Selection) -> str:
+    word, numbers = selection.canonical
+    return " ".join([word, *(f"{number:.17g}" for number in numbers)])
+
+
+def _moved(selection: Selection, by: float) -> Selection:
+    """The same eigenvalues where every lambda has moved."""
+    match selection:
+        case Below(limit):
+            return Below(limit + by)
+        case Window(lower, upper):
+            return Window(lower + by, upper + by)
+        case _:
+            return selection
+
+
 def _adapt(
     coefficients: CoefficientMesh,
     resolved: Resolved,
-    count: int,
+    wish: Selection,
     rtol: float,
     scale: float,
     chosen: SolveOptions,
     poll: Callable[[], None],
 ) -> _Pass:
     """The first mesh, then elements halved where a bound needs it, as often as the options allow."""
-    wanted = count + _spare(count)
-    chain, top = _resolve_top(coefficients, resolved, wanted, scale, chosen, poll)
+    chain, top = _resolve_top(coefficients, resolved, wish, scale, chosen, poll)
     poll()
-    result = _one_pass(chain, resolved, count, wanted, top, scale, poll)
+    result = _one_pass(chain, resolved, wish, top, scale, poll)
     for _ in range(chosen.passes):
-        marked = _marked(result, count, rtol, scale)
+        marked = _marked(result, rtol, scale)
         elements = result.mesh.edges.size - 1
         if not marked.any() or elements + int(marked.sum()) > chosen.max_elements:
             break
         degree = result.chain.elements.reference.degree
         chain = build_chain(build_elements(bisect_elements(result.mesh, marked), degree), resolved, poll)
-        top = _top_of(chain, wanted, top)
+        top = _top_of(chain, wish, top)
         poll()
-        result = _one_pass(chain, resolved, count, wanted, top, scale, poll)
+        result = _one_pass(chain, resolved, wish, top, scale, poll)
     return result
 
 
 def _system(chain: Chain) -> System:
-    return OpenChain(chain)
+    return OpenChain(chain) if chain.factor is None else Ring(chain)
+
+
+def _span(system: System, wish: Selection) -> tuple[int, int]:
+    """(first, end): the indices that `wish` names."""
+    match wish:
+        case Lowest(count):
+            return 0, count
+        case IndexRange(first, end):
+            return first, end
+        case Below(limit):
+            return 0, int(system.count(np.array([limit]))[0])
+        case Window(lower, upper):
+            first, end = system.count(np.array([lower, upper]))
+            return int(first), int(end)
+
+
+def _wanted(system: System, wish: Selection) -> int:
+    """How many eigenvalues must be resolved."""
+    first, end = _span(system, wish)
+    return end + _spare(end - first)
 
 
 def _spare(count: int) -> int:
@@ -203,14 +263,23 @@ def _spare(count: int) -> int:
 def _resolve_top(
     coefficients: CoefficientMesh,
     resolved: Resolved,
-    wanted: int,
+    wish: Selection,
     scale: float,
     chosen: SolveOptions,
     poll: Callable[[], None],
 ) -> tuple[Chain, float]:
-    """A chain that resolves a lambda below which at least `wanted` eigenvalues lie, and that lambda."""
-    phase = (wanted + 1.0) * np.pi
-    found = 0
+    """A chain that resolves all that `wish` names and some more, and a lambda above these."""
+    match wish:
+        case Lowest(count):
+            modes = count + _spare(count)
+        case IndexRange(first, end):
+            modes = end + _spare(end - first)
+        case Below(limit) | Window(_, limit):
+            modes = int(phase_at(coefficients, limit) / np.pi) + _spare(0)
+            if modes > 2 * chosen.max_modes:
+                raise _too_many(wish, modes, chosen)
+    phase = (modes + 1.0) * np.pi
+    found = wanted = 0
     floor = -scale
     for _ in range(60):
         poll()
@@ -220,7 +289,7 @@ def _resolve_top(
             (chosen.degree, chosen.phase) if chosen.degree else choose_degree(coefficients, low, top)
         )
         # unknowns at least half as many again as modes, whatever the phase says
-        least = int(np.ceil(1.5 * (wanted + 2) / (degree - 1)))
+        least = int(np.ceil(1.5 * (modes + 2) / (degree - 1)))
         mesh = refine_for(coefficients, low, top, radians, least, chosen.max_elements)
         chain = build_chain(build_elements(mesh, degree), resolved, poll)
         system = _system(chain)
@@ -228,10 +297,16 @@ def _resolve_top(
         if bound_below > 0:
             # what an end or a spring binds below the potential decays faster than the mesh was made for
             floor = floor_below(system, scale)
-        elif found >= wanted:
+            continue
+        first, end = _span(system, wish)
+        if end - first > chosen.max_modes:
+            raise _too_many(wish, end - first, chosen)
+        wanted = end + _spare(end - first)
+        if found >= wanted:
+            if end == first:
+                raise _empty(wish, first, system, floor, top, scale, poll)
             return chain, top
-        else:
-            phase += (wanted - found + 0.5) * np.pi
+        phase += (wanted - found + 0.5) * np.pi
     raise NotConverged.at(
         Reason.NOT_CONVERGED,
         "modes",
@@ -240,10 +315,38 @@ def _resolve_top(
     )
 
 
-def _top_of(chain: Chain, wanted: int, top: float) -> float:
+def _too_many(wish: Selection, found: int, chosen: SolveOptions) -> CoreError:
+    word, _ = wish.canonical
+    message = f"holds about {found} eigenvalues, at most {chosen.max_modes} are answered"
+    return InvalidRequest.at(Reason.TOO_MANY_MODES, word, message, _asked(wish))
+
+
+def _empty(
+    wish: Selection,
+    index: int,
+    system: System,
+    floor: float,
+    top: float,
+    scale: float,
+    poll: Callable[[], None],
+) -> CoreError:
+    first = max(index - 1, 0)
+    near = eigenvalues(
+        system, first, index - first + 1, min(floor, floor_below(system, scale)), top, scale, poll
+    )
+    listed = ", ".join(f"lambda_{first + i} = {value:.9g}" for i, value in enumerate(near.values))
+    word, _ = wish.canonical
+    return SpectrumExhausted.at(
+        Reason.SPECTRUM_EXHAUSTED, word, f"no eigenvalue lies there; the nearest: {listed}", _asked(wish)
+    )
+
+
+def _top_of(chain: Chain, wish: Selection, top: float) -> float:
     """`top`, raised a little where a finer mesh moved the last eigenvalue across it."""
+    system = _system(chain)
+    wanted = _wanted(system, wish)
     for _ in range(60):
-        if int(_system(chain).count(np.array([top]))[0]) >= wanted:
+        if int(system.count(np.array([top]))[0]) >= wanted:
             return top
         top += 0.1 * abs(top) + np.finfo(float).tiny
     raise NotConverged.at(Reason.NOT_CONVERGED, "modes", "the spectrum moved under refinement", str(wanted))
@@ -252,35 +355,36 @@ def _top_of(chain: Chain, wanted: int, top: float) -> float:
 def _one_pass(
     chain: Chain,
     resolved: Resolved,
-    count: int,
-    wanted: int,
+    wish: Selection,
     top: float,
     scale: float,
     poll: Callable[[], None],
 ) -> _Pass:
     system = _system(chain)
     floor = floor_below(system, scale)
-    values = lowest(system, wanted, floor, top, scale, poll).values
-    _check_counts(system, values)
+    first, end = _span(system, wish)
+    size = end - first + _spare(end - first)
+    values = eigenvalues(system, first, size, floor, top, scale, poll).values
+    _check_counts(system, first, values)
     poll()
     modes = make_modes(chain, system.vectors(values, scale))
     poll()
     defect = flux_defects(chain, values, modes)
     mesh, degree = chain.elements.mesh, chain.elements.reference.degree
-    bounds = bound(values, count, defect, mesh, resolved, degree, scale, poll)
-    return _Pass(mesh, chain, values, modes, defect, bounds)
+    bounds = bound(values, end - first, defect, mesh, resolved, degree, scale, poll, first)
+    return _Pass(first, end - first, mesh, chain, values, modes, defect, bounds)
 
 
-def _check_counts(system: System, values: Array) -> None:
+def _check_counts(system: System, first: int, values: Array) -> None:
     """One count between all neighbours that can be told apart: index n has exactly n eigenvalues below it."""
     gaps = np.diff(values)
     clear = np.flatnonzero(gaps > 1e-12 * (np.abs(values[1:]) + np.abs(values[:-1])))
     if clear.size == 0:
         return
     counts = system.count(0.5 * (values[clear] + values[clear + 1]))
-    wrong = np.flatnonzero(counts != clear + 1)
+    wrong = np.flatnonzero(counts != first + clear + 1)
     if wrong.size:
-        n = int(clear[wrong[0]])
+        n = first + int(clear[wrong[0]])
         raise NotConverged.at(
             Reason.NOT_CONVERGED,
             "modes",
@@ -289,8 +393,9 @@ def _check_counts(system: System, values: Array) -> None:
         )
 
 
-def _marked(result: _Pass, count: int, rtol: float, scale: float) -> NDArray[np.bool_]:
+def _marked(result: _Pass, rtol: float, scale: float) -> NDArray[np.bool_]:
     """Elements whose flux defects keep some eigenvalue from the tolerance."""
+    count = result.count
     size = np.maximum(np.abs(result.values[:count]), scale)
     shares = result.defect.by_element[:count]
     # int d^2 / p estimates the error of a Ritz value closely, whether or not a comparison bounds it
@@ -304,8 +409,15 @@ def _marked(result: _Pass, count: int, rtol: float, scale: float) -> NDArray[np.
 
 
 def _record(
-    problem: Problem, resolved: Resolved, result: _Pass, count: int, rtol: float, scale: float, seconds: float
+    problem: Problem,
+    resolved: Resolved,
+    result: _Pass,
+    wish: Selection,
+    rtol: float,
+    scale: float,
+    seconds: float,
 ) -> Record:
+    count = result.count
     chain, modes, mesh, bounds = result.chain, result.modes, result.mesh, result.bounds
     legendre = modes.legendre(chain.elements.reference.to_legendre)
     zeros = interior_zeros(chain, modes, legendre)[:count]
@@ -315,7 +427,7 @@ def _record(
     return Record(
         algorithm_version=ALGORITHM_VERSION,
         problem_digest=digest,
-        basis_key=basis_key(digest, count, rtol),
+        basis_key=selection_key(digest, wish, rtol),
         rtol=rtol,
         eigenvalues=result.values[:count],
         lower=bounds.lower,
@@ -341,6 +453,7 @@ def _record(
             [[joint.x, joint.resistance, joint.spring, joint.mass] for joint in resolved.joints],
             dtype=np.float64,
         ).reshape(-1, 4),
+        first_index=result.first,
         solve_seconds=seconds,
     )
 

@@ -1,4 +1,4 @@
-"""The lowest eigenvalues of the condensed chain, found by counting so that none can be missed.
+"""The eigenvalues of the condensed chain, found by counting so that none can be missed.
 
 Every index n keeps a bracket (low, high) with count(low) <= n < count(high). Brackets are cut by Newton steps
 of the twisted factorisation, accepted only while the bracket isolates one eigenvalue, else by bisection; all
@@ -19,7 +19,7 @@ from numpy.typing import NDArray
 from modewright_service.core.condensed import Evaluation, Vectors
 from modewright_service.core.errors import NotConverged, Reason
 
-__all__ = ["Spectrum", "System", "floor_below", "lowest"]
+__all__ = ["Spectrum", "System", "eigenvalues", "floor_below"]
 
 Array = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -73,22 +73,31 @@ def floor_below(system: System, scale: float) -> float:
     )
 
 
-def lowest(
-    system: System, count: int, floor: float, top: float, scale: float, poll: Callable[[], None]
+def eigenvalues(
+    system: System,
+    first: int,
+    count: int,
+    floor: float,
+    top: float,
+    scale: float,
+    poll: Callable[[], None],
 ) -> Spectrum:
-    """The `count` lowest eigenvalues, all of which lie in (floor, top).
+    """`count` eigenvalues from index `first` on, all of which lie in (floor, top).
 
     scale: size of a typical low eigenvalue, for the stopping rule near lambda = 0.
     Raises NotConverged where a bracket does not close (which a consistent count excludes).
     """
-    parameters = np.linspace(0.0, 1.0, int(1.3 * count) + 3)
-    grid = floor + (top - floor) * parameters**2
+    index = first + np.arange(count)
+    low_end, high_end = _range(system, first, first + count, floor, top) if first else (floor, top)
+    # eigenvalues grow like the square of their index
+    start = np.sqrt((low_end - floor) / (high_end - floor))
+    parameters = np.linspace(start, 1.0, int(1.3 * count) + 3)
+    grid = floor + (high_end - floor) * parameters**2
     counts = np.maximum.accumulate(system.count(grid))
-    index = np.arange(count)
     above = np.searchsorted(counts, index, side="right")
-    if int(counts[-1]) < count:
+    if int(counts[-1]) < first + count:
         raise NotConverged.at(
-            Reason.NOT_CONVERGED, "modes", f"{int(counts[-1])} found below the top", str(count)
+            Reason.NOT_CONVERGED, "modes", f"{int(counts[-1])} found below the top", str(first + count)
         )
     above = np.maximum(above, 1)
     low, high = grid[above - 1].copy(), grid[above].copy()
@@ -130,15 +139,35 @@ def lowest(
         raise NotConverged.at(
             Reason.NOT_CONVERGED, "modes", f"bracket of index {n} did not close", repr(value[n])
         )
-    value, counted = _confirmed(system, value, low, high, scale, poll)
+    value, counted = _confirmed(system, index, value, low, high, scale, poll)
     return Spectrum(np.maximum.accumulate(value), evaluations + counted)
 
 
+def _range(system: System, first: int, end: int, floor: float, top: float) -> tuple[float, float]:
+    """(low, high) within (floor, top), not much wider than the indices first..end-1 need."""
+    low, high = floor, top
+    for _ in range(_ROUNDS):
+        trials = np.linspace(low, high, 18)[1:-1]
+        counts = system.count(trials)
+        under, over = trials[counts <= first], trials[counts >= end]
+        before = high - low
+        low = max(low, float(under.max(initial=low)))
+        high = min(high, float(over.min(initial=high)))
+        if high - low > 0.5 * before:
+            break
+    return low, high
+
+
 def _confirmed(
-    system: System, value: Array, low: Array, high: Array, scale: float, poll: Callable[[], None]
+    system: System,
+    index: IntArray,
+    value: Array,
+    low: Array,
+    high: Array,
+    scale: float,
+    poll: Callable[[], None],
 ) -> tuple[Array, int]:
     """The values, those that counts do not confirm replaced by bisection of (low, high); and counts spent."""
-    index = np.arange(value.size)
     margin = _CONFIRMED * _EPS * (np.abs(value) + scale)
     above_value = system.count(value - margin) > index
     wrong = np.flatnonzero(above_value | (system.count(value + margin) <= index))

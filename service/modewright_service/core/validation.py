@@ -44,6 +44,9 @@ MAX_VIOLATIONS = 64
 # Layer edges and interfaces written in decimals (0.1 + 0.2 against 0.3) are taken as one point.
 SNAP = 1e-12
 
+# Beyond a million turns the reduction of a phase costs more digits than a solve keeps.
+_LARGEST_PHASE = 1e6
+
 _UNSUPPORTED = {
     Reason.UNSUPPORTED_END,
     Reason.UNSUPPORTED_COUPLING,
@@ -115,7 +118,7 @@ def validate(problem: Problem) -> None:
     if domain_known:
         _check_interfaces(problem, faults)
     if problem.coupling is not None:
-        _check_coupling(problem.coupling, faults)
+        _check_coupling(problem, problem.coupling, faults)
     if not faults.found:
         _check_weight(problem, faults)
     faults.raise_if_any()
@@ -345,13 +348,16 @@ def _both(interface: Interface) -> str:
     return f"resistance {interface.resistance!r}, spring {interface.spring!r}, mass {interface.mass!r}"
 
 
-def _check_coupling(coupling: Coupling, faults: _Faults) -> None:
+def _check_coupling(problem: Problem, coupling: Coupling, faults: _Faults) -> None:
     if coupling.kind not in list(CouplingKind):
         faults.add(Reason.BAD_END_CONDITION, "coupling.kind", "unknown coupling", str(coupling.kind))
         return
-    faults.finite(coupling.phase, "coupling.phase")
-    message = "coupled ends are not handled by this version"
-    faults.add(Reason.UNSUPPORTED_COUPLING, "coupling.kind", message, str(coupling.kind))
+    if faults.finite(coupling.phase, "coupling.phase") and abs(coupling.phase) > _LARGEST_PHASE:
+        message = f"a phase beyond {_LARGEST_PHASE:g} radians has lost its digits: reduce it to (-pi, pi]"
+        faults.add(Reason.BAD_END_CONDITION, "coupling.phase", message, coupling.phase)
+    if problem.geometry is not Geometry.PLANE:
+        message = "the two ends of a radius are different surfaces and cannot be coupled"
+        faults.add(Reason.UNSUPPORTED_COUPLING, "coupling.kind", message, str(problem.geometry))
 
 
 def has_mass(problem: Problem) -> bool:
