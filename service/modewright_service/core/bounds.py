@@ -124,7 +124,7 @@ def bound(
     plain = _plain(nu, count)
     margin = rounding[:count] + extra[:count]
     confirmed = np.isfinite(lower)
-    lower = np.maximum(lower - margin, plain)
+    lower = np.maximum(lower, plain) - margin
     upper = lam[:count] + margin
     lower = np.minimum(lower, lam[:count])
     return Bounds(lower, upper, confirmed, size, margin)
@@ -254,7 +254,8 @@ def _lehmann_goerisch(
         if first.size == 0:
             continue
         nu = nu_of[first + size] + shift
-        usable = np.isfinite(nu) & (rho[first] > 0.0)
+        # above the last member by more than rounding
+        usable = np.isfinite(nu) & (rho[first] > 0.0) & (nu - rho[first + size - 1] > 1e-13 * np.abs(nu))
         first, nu = first[usable], nu[usable]
         if first.size == 0:
             continue
