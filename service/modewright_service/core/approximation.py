@@ -19,9 +19,12 @@ from typing import Any
 
 import numpy as np
 
-from .coefficients import CoefficientMesh, Ranges, ranges, restrict
+from .coefficients import CoefficientMesh, Ranges, ranges
 from .cuts import find_cuts
 from .description import Constant, Expression, FloatArray, Layer, Problem
+from .end_elements import EndMap
+from .end_fitting import fit_end
+from .end_mesh import restrict, with_ends
 from .errors import CoreError, InvalidProblem, Reason, Unsupported
 from .evaluation import constant_value
 from .expressions import parse
@@ -33,6 +36,8 @@ from .validation import has_mass, zero_weight_error
 __all__ = ["CoefficientMesh", "Ranges", "approximate", "ranges", "restrict"]
 
 Poll = Callable[[], None]
+# Exponents of the left and the right end, None where the end is plain.
+Ends = tuple[EndMap | None, EndMap | None]
 # What a layer consists of: (value, relative error) of constant p, q, w, or the sources of the three.
 _Part = list[tuple[float, float]] | list[Source]
 
@@ -48,6 +53,8 @@ _RESERVE = 16
 _LOOKS = 32
 # Elements fitted at once: the discs of a batch then take a few megabytes.
 _BATCH = 2048
+# Share of its layer that an end element has at most.
+_END_SHARE = 0.25
 # Share of a layer at which a coefficient is looked at beside an end where it is infinite.
 _JUST_INSIDE = 1e-6
 
@@ -81,9 +88,12 @@ def approximate(
     tolerance: float = DEFAULT_TOLERANCE,
     max_elements: int = DEFAULT_MAX_ELEMENTS,
     max_degree: int = DEFAULT_MAX_DEGREE,
+    ends: Ends = (None, None),
     poll: Poll = _no_poll,
 ) -> CoefficientMesh:
     """Polynomials for the coefficients of a validated problem, with bounds of their errors.
+
+    ``ends``: the exponents of the left and the right end where there is to be an end element.
 
     ``tolerance`` bounds the truncation of p and w relative to their least value on each element, and of
     q relative to the larger of its greatest modulus there and Lambda times the layer's mean w
@@ -101,13 +111,19 @@ def approximate(
     power = problem.geometry.power
     parts: list[_Part] = []
     for index, layer in enumerate(problem.layers):
-        constants = _constants(layer, index) if power == 0 else None
+        plain = power == 0 and not _has_end(index, len(problem.layers), ends)
+        constants = _constants(layer, index) if plain else None
         parts.append(constants or _sources(layer, index, power, max_degree))
     scales = _q_scales(parts, edges)
     rows = _Rows()
     total = len(problem.layers)
+    outer = _outer_elements(parts, edges, joints, ends, poll)
+    bounds = edges.copy()
+    for k, found in ((0, outer[0]), (-1, outer[1])):
+        if found is not None:
+            bounds[k] = found.edges[1 + k]
     for index, part in enumerate(parts):
-        left, right = float(edges[index]), float(edges[index + 1])
+        left, right = float(bounds[index]), float(bounds[index + 1])
         inside = [x for x in joints if left < x < right]
         if isinstance(part[0], tuple):
             _add_constant(rows, part, index, [left, *inside, right], max_degree)
@@ -124,10 +140,43 @@ def approximate(
             (index == 0, index == total - 1),
         )
         task.run(rows, inside, poll)
-    mesh = _assembled(rows, edges)
+    mesh = _assembled(rows, bounds)
+    if outer != (None, None):
+        mesh = with_ends(mesh, ends, outer)
     if not np.any(mesh.w) and not has_mass(problem):
         raise zero_weight_error()
     return mesh
+
+
+def _has_end(index: int, total: int, ends: Ends) -> bool:
+    return (index == 0 and ends[0] is not None) or (index == total - 1 and ends[1] is not None)
+
+
+def _outer_elements(
+    parts: list[_Part], edges: FloatArray, joints: list[float], ends: Ends, poll: Poll
+) -> tuple[CoefficientMesh | None, CoefficientMesh | None]:
+    """The end elements, each well within its layer and clear of interfaces, knots and switches."""
+    found: list[CoefficientMesh | None] = []
+    for at_left, end in zip((True, False), ends, strict=True):
+        if end is None:
+            found.append(None)
+            continue
+        index = 0 if at_left else len(parts) - 1
+        sources = [source for source in parts[index] if isinstance(source, Source)]
+        left, right = float(edges[index]), float(edges[index + 1])
+        place, span = (left, right - left) if at_left else (right, right - left)
+        inside = [x for x in joints if left < x < right]
+        near = (left, right - _END_SHARE * span) if at_left else (left + _END_SHARE * span, right)
+        for source in sources:
+            if source.table is not None:
+                inside += [float(knot) for knot in source.table.knots if left < knot < right]
+            else:
+                just_inside = _JUST_INSIDE * span
+                first, last = (near[0] + just_inside, near[1]) if at_left else (near[0], near[1] - just_inside)
+                inside += find_cuts(source.program, None, first, last, source.signed).points
+        widest = min([_END_SHARE * span, *(abs(x - place) for x in inside)])
+        found.append(fit_end(sources, place, at_left, end, widest, index, poll))
+    return found[0], found[1]
 
 
 def _constants(layer: Layer, index: int) -> list[tuple[float, float]] | None:

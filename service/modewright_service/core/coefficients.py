@@ -10,6 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from .description import FloatArray
+from .end_elements import EndMap
 from .legendre import (
     EXTENDED,
     EXTENDED_UNIT,
@@ -33,6 +34,10 @@ class CoefficientMesh:
     ``p_error`` of sup |p - p~|/p; ``q_error`` of sup |q - q~|; ``w_error`` of sup |w - w~|/w (0 where w
     is zero throughout; inf where w vanishes at a place that its polynomial cannot follow exactly);
     ``w_absolute`` of sup |w - w~|, always finite.
+
+    With ``left_map`` or ``right_map`` the outermost element there is an end element
+    (:mod:`.end_elements`): its rows hold P, R and W, powers of y/h divided out, as series in tau = 2 t - 1 at
+    the left and 1 - 2 t at the right, y = h t^m, and its errors are those of P, R, W.
     """
 
     edges: FloatArray
@@ -44,11 +49,26 @@ class CoefficientMesh:
     q_error: FloatArray
     w_error: FloatArray
     w_absolute: FloatArray
+    left_map: EndMap | None = None
+    right_map: EndMap | None = None
 
     @property
     def elements(self) -> int:
         """The number of elements."""
         return len(self.layer)
+
+    @property
+    def end_maps(self) -> tuple[tuple[int, EndMap], ...]:
+        """(element, its exponents) of the end elements."""
+        ends = ((0, self.left_map), (self.elements - 1, self.right_map))
+        return tuple((element, end) for element, end in ends if end is not None)
+
+    @property
+    def plain(self) -> npt.NDArray[np.bool_]:
+        """(E,) which elements are not end elements."""
+        mask = np.ones(self.elements, dtype=bool)
+        mask[[element for element, _ in self.end_maps]] = False
+        return mask
 
 
 @dataclass(frozen=True, eq=False)
@@ -185,11 +205,11 @@ def quotient_floor(series: FloatArray, side: int, order: int) -> float:
     """A lower bound on [-1, 1] of series / (1 -+ t)^order for a series that vanishes so; 0 if none."""
     quotient = series.astype(EXTENDED)
     for _ in range(order):
-        quotient = _divided_by_distance(quotient, side)
+        quotient = divided_by_distance(quotient, side)
     return float(positive_floor(quotient.astype(np.float64)[np.newaxis])[0])
 
 
-def _divided_by_distance(series: Any, side: int) -> Any:
+def divided_by_distance(series: Any, side: int) -> Any:
     """The series f with (1 + t) f (side -1) or (1 - t) f (side 1) equal to ``series``, one degree lower."""
     degree = len(series) - 1
     quotient = np.zeros(degree, dtype=series.dtype)

@@ -29,6 +29,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from modewright_service.core.elements import Elements
+from modewright_service.core.end_mesh import inner_springs
 from modewright_service.core.errors import NotConverged, Reason
 from modewright_service.core.problem import Resolved
 
@@ -67,7 +68,7 @@ class Chain:
 
     elements: the decomposed elements. element_of_link: (n,) element index or -1 for a resistance.
     conductance: (n,) 1/R of a resistance link, 0 elsewhere. stiffness, mass: (n+1,) point terms of the nodes.
-    left_fixed, right_fixed: u = 0 at the first, last node.
+    left_fixed, right_fixed: u = 0 at the first, last node, or no unknown there (an end element's own end).
     left_node: first node that lies on the interval (1 where a lump hangs behind a resistance), right_node
         likewise.
     poll: called between batches of work; may raise.
@@ -147,6 +148,8 @@ def build_chain(elements: Elements, resolved: Resolved, poll: Callable[[], None]
         x = next(iter(joints))
         raise NotConverged.at(Reason.INTERNAL, "interfaces", "an interface is not an element edge", repr(x))
     right_node = len(stiffness) - 1
+    for at_left, spring in inner_springs(elements.mesh):
+        stiffness[left_node + 1 if at_left else right_node - 1] += spring
     stiffness[-1] += right.stiffness
     mass[-1] += right.mass
     if right.lump is not None:
@@ -158,8 +161,8 @@ def build_chain(elements: Elements, resolved: Resolved, poll: Callable[[], None]
         np.array(conductance),
         np.array(stiffness),
         np.array(mass),
-        left.dirichlet,
-        right.dirichlet,
+        left.dirichlet or elements.mesh.left_map is not None,
+        right.dirichlet or elements.mesh.right_map is not None,
         left_node,
         right_node,
         poll,
@@ -313,7 +316,8 @@ def _choose_twist(chain: Chain, k: Links, lam: Array, x: Array, y: Array) -> _Tw
     node_scale[:-1] += g_hat
     node_scale[1:] += g_hat
     nodes = x + y
-    relative = np.abs(nodes) / node_scale[:, None]
+    # a singular end's node has no stiffness at all
+    relative = np.abs(nodes) / np.maximum(node_scale, np.finfo(float).tiny)[:, None]
     if chain.left_fixed:
         relative[0] = np.inf
     if chain.right_fixed:

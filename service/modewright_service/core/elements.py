@@ -19,16 +19,20 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import lru_cache
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from modewright_service.core.approximation import CoefficientMesh
+from modewright_service.core.end_elements import EndReference, end_reference
 from modewright_service.core.quadrature import gauss_legendre
 
 __all__ = ["Elements", "Reference", "build_elements", "reference"]
 
 Array = NDArray[np.float64]
+# Values of modes: complex where the ends are coupled with a phase.
+Field = NDArray[Any]
 
 
 @dataclass(frozen=True, eq=False)
@@ -87,7 +91,10 @@ class Elements:
     """Decomposed elements: E elements of degree k, J = k - 1 bubbles.
 
     mesh: the coefficients they come from. reference: the shape functions.
-    p, q, w: (E, G) coefficient values at the Gauss points; half: (E,) half lengths.
+    ends: (element, shape functions) of the end elements (:mod:`.end_elements`).
+    p, q, w: (E, G) coefficient values at the Gauss points; half: (E,) half lengths; weights: (E, G) of the
+        quadrature in x. On end elements the coefficients of v_t^2, v^2, v^2 in the weight t^(m D), the weights
+        those of Gauss-Jacobi, half = 1.
     shift: (E,) s. theta: (E, J) descending masses of the bubble modes; modes: (E, J, J), columns v_j in
         bubbles.
     kappa: (E, J, 2) C(v_j, N_v); mass: (E, J, 2) m_j = M(v_j, psi_v).
@@ -96,7 +103,9 @@ class Elements:
 
     mesh: CoefficientMesh
     reference: Reference
+    ends: tuple[tuple[int, EndReference], ...]
     half: Array
+    weights: Array
     p: Array
     q: Array
     w: Array
@@ -113,6 +122,47 @@ class Elements:
     def count(self) -> int:
         return int(self.half.size)
 
+    def values_of(self, shapes: Field) -> Field:
+        """(E, T, G): u (on end elements v) at the quadrature points, from shapes (E, T, k+1)."""
+        result = np.matmul(shapes, self.reference.values.T)
+        for element, own in self.ends:
+            result[element] = shapes[element] @ own.values.T
+        return result
+
+    def fluxes_of(self, shapes: Field) -> Field:
+        """(E, T, G): p u' at the quadrature points (on end elements that of v, t^(m D) divided out)."""
+        result = np.matmul(shapes, self.reference.slopes.T)
+        for element, own in self.ends:
+            result[element] = shapes[element] @ own.slopes.T
+        result *= (self.p / self.half[:, None])[:, None, :]
+        return result
+
+    def running(self, load: Field) -> Field:
+        """(E, T, G): integrals of a load (E, T, G) from the left, on end elements from the singular end."""
+        result: Field = np.matmul(load, self.reference.antiderivative.T) * self.half[:, None, None]
+        for element, own in self.ends:
+            result[element] = load[element] @ own.running.T
+        return result
+
+    def residuals(self, flux: Field, load: Field) -> Field:
+        """(E, T): flux at the left of each element, from the residual of its left vertex function.
+
+        int p u' N' + int (q - lambda w) u N, negated, flux and load given at the quadrature points.
+        """
+        ref = self.reference
+        result: Field = np.einsum("etg,g->et", flux, ref.weights * ref.slopes[:, 0])
+        result += np.einsum("etg,eg->et", load, self.weights * ref.values[:, 0])
+        for element, own in self.ends:
+            result[element] = load[element] @ (own.weights * own.values[:, 0])
+        return -result
+
+    def legendre_of(self, shapes: Field) -> Field:
+        """(E, T, k+1): Legendre coefficients in each element's own variable."""
+        result: Field = np.matmul(shapes, self.reference.to_legendre)
+        for element, own in self.ends:
+            result[element] = shapes[element] @ own.to_legendre
+        return result
+
 
 def build_elements(mesh: CoefficientMesh, degree: int) -> Elements:
     """Matrices and decompositions of all elements of `mesh`, shape functions of `degree` >= 2."""
@@ -122,9 +172,16 @@ def build_elements(mesh: CoefficientMesh, degree: int) -> Elements:
     coefficient_values = _legendre(ref.points, orders).T
     p, q, w = mesh.p @ coefficient_values, mesh.q @ coefficient_values, mesh.w @ coefficient_values
     half = 0.5 * np.diff(mesh.edges)
+    weights = ref.weights * half[:, None]
+    ends = _ends(mesh, ref, p, q, w, half, weights)
     stiff_p = _products(ref.slopes, p * (ref.weights / half[:, None]))
-    stiff_q = _products(ref.values, q * (ref.weights * half[:, None]))
-    masses = _products(ref.values, w * (ref.weights * half[:, None]))
+    stiff_q = _products(ref.values, q * weights)
+    masses = _products(ref.values, w * weights)
+    for e, own in ends:
+        one = slice(e, e + 1)
+        stiff_p[one] = _products(own.slopes, p[one] * own.weights)
+        stiff_q[one] = _products(own.values, q[one] * own.weights)
+        masses[one] = _products(own.values, w[one] * own.weights)
     shift = _shifts(stiff_p[:, 2:, 2:], stiff_q[:, 2:, 2:], masses[:, 2:, 2:], q, w)
     s = shift[:, None, None]
     no_p = stiff_q + s * masses
@@ -148,7 +205,26 @@ def build_elements(mesh: CoefficientMesh, degree: int) -> Elements:
     rows = one_vertices - np.einsum("ejv,ej->ev", kappa, one_bubbles)
     cross = kappa_t @ (modes_t @ masses[:, 2:, :2])
     mass_c = masses[:, :2, :2] - cross - np.swapaxes(cross, 1, 2) + kappa_t @ (theta[:, :, None] * kappa)
-    return Elements(mesh, ref, half, p, q, w, shift, theta, modes, kappa, mass, g, rows, mass_c)
+    return Elements(mesh, ref, ends, half, weights, p, q, w, shift, theta, modes, kappa, mass, g, rows, mass_c)
+
+
+def _ends(
+    mesh: CoefficientMesh, ref: Reference, p: Array, q: Array, w: Array, half: Array, weights: Array
+) -> tuple[tuple[int, EndReference], ...]:
+    """Shape functions of the end elements; their rows of p, q, w, half and weights are written in place."""
+    found = []
+    for e, end in mesh.end_maps:
+        own = end_reference(ref.degree, ref.points.size, end.power, end.steps, e == 0)
+        tau = 2.0 * own.t - 1.0 if e == 0 else 1.0 - 2.0 * own.t
+        scale = float(mesh.edges[e + 1] - mesh.edges[e]) * end.m
+        table = _legendre(tau, mesh.p.shape[1] - 1)
+        p[e] = (table @ mesh.p[e]) * own.t / scale
+        q[e] = (table @ mesh.q[e]) * scale
+        w[e] = (table @ mesh.w[e]) * own.t ** (end.steps - 1) * scale
+        half[e] = 1.0
+        weights[e] = own.weights
+        found.append((e, own))
+    return tuple(found)
 
 
 def _products(shapes: Array, weights: Array) -> Array:

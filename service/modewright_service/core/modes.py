@@ -13,11 +13,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from modewright_service.core.condensed import Chain, Field, Vectors
+from modewright_service.core.elements import Elements
 
 __all__ = ["FluxDefect", "Modes", "flux_defects", "interior_zeros", "make_modes"]
 
 Array = NDArray[np.float64]
 
+_EPS = float(np.finfo(float).eps)
 # Decaying tails keep their relative accuracy down to here; below, doubles lose digits.
 _FADED = 1e-280
 
@@ -33,9 +35,9 @@ class Modes:
     shapes: Field
     nodes: Field
 
-    def legendre(self, to_legendre: Array) -> Field:
+    def legendre(self, elements: Elements) -> Field:
         """(T, E (k+1)) Legendre coefficients, element after element."""
-        values = np.matmul(self.shapes, to_legendre)
+        values = elements.legendre_of(self.shapes)
         return np.ascontiguousarray(np.swapaxes(values, 0, 1)).reshape(values.shape[1], -1)
 
 
@@ -48,18 +50,28 @@ def make_modes(chain: Chain, vectors: Vectors) -> Modes:
         left[:, :, None] * el.kappa[:, None, :, 0] + right[:, :, None] * el.kappa[:, None, :, 1]
     )
     bubbles = np.matmul(amplitudes, np.swapaxes(el.modes, 1, 2))
+    for element, _ in el.ends:
+        _chop(bubbles[element])
     shapes = np.concatenate([left[:, :, None], right[:, :, None], bubbles], axis=2)
     nodes = vectors.nodes
     factor = _signs(chain, shapes, nodes) / _norms(chain, shapes, nodes)
     return Modes(shapes * factor[None, :, None], nodes * factor)
 
 
+def _chop(bubbles: Field) -> None:
+    """Set the last coefficients to zero that are rounding, in place; (T, J), by degree.
+
+    Jacobi polynomials with a high exponent are so large at the end that rounding there would pass for values.
+    """
+    small = np.abs(bubbles) <= 2.0 * _EPS * np.abs(bubbles).max(axis=1, keepdims=True)
+    trailing = np.logical_and.accumulate(small[:, ::-1], axis=1)[:, ::-1]
+    bubbles[trailing] = 0.0
+
+
 def _norms(chain: Chain, shapes: Field, nodes: Field) -> Array:
     """(T,) norms by quadrature, point masses included."""
     el = chain.elements
-    values = np.matmul(shapes, el.reference.values.T)
-    weights = el.w * (el.reference.weights * el.half[:, None])
-    norm2: Array = np.einsum("etg,eg->t", _square(values), weights)
+    norm2: Array = np.einsum("etg,eg->t", _square(el.values_of(shapes)), el.w * el.weights)
     norm2 += (chain.mass[:, None] * _square(nodes)).sum(axis=0)
     return np.sqrt(norm2)
 
@@ -74,7 +86,10 @@ def _signs(chain: Chain, shapes: Field, nodes: Field) -> Field:
     """+-1, or a phase factor, so that u > 0 right of the left end, or p u' > 0 there where u vanishes."""
     # slope at t = -1 of the shape functions of the first element
     slope = shapes[0] @ _end_slopes(chain.elements.reference.degree, -1.0)
-    if chain.left_fixed:
+    if chain.elements.mesh.left_map is not None:
+        # u = (y/h)^s v: the sign of v at the end
+        lead = shapes[0] @ chain.elements.ends[0][1].at_end
+    elif chain.left_fixed:
         lead = slope
     else:
         lead = nodes[chain.left_node]
@@ -111,18 +126,14 @@ class FluxDefect:
 def flux_defects(chain: Chain, lam: Array, modes: Modes) -> FluxDefect:
     """Rebuilt flux minus p u' of every mode at the Gauss points, divided by sqrt(p)."""
     el = chain.elements
-    ref = el.reference
     at = np.flatnonzero(chain.element_of_link >= 0)
-    u = np.matmul(modes.shapes, ref.values.T)
-    flux = np.matmul(modes.shapes, ref.slopes.T) * (el.p / el.half[:, None])[:, None, :]
+    u, flux = el.values_of(modes.shapes), el.fluxes_of(modes.shapes)
     load = el.q[:, None, :] * u - lam[None, :, None] * (el.w[:, None, :] * u)
-    weights = ref.weights * el.half[:, None]
-    # residual of the left vertex function: sigma(left) = -(int p u' N' + (q - lambda w) u N)
-    start = -(
-        np.einsum("etg,g->et", flux, ref.weights * ref.slopes[:, 0])
-        + np.einsum("etg,eg->et", load, weights * ref.values[:, 0])
-    )
-    sigma = start[:, :, None] + np.matmul(load, ref.antiderivative.T) * el.half[:, None, None]
+    weights = el.weights
+    start = el.residuals(flux, load)
+    sigma = el.running(load)
+    plain = el.mesh.plain
+    sigma[plain] += start[plain, :, None]
     root = np.sqrt(weights / el.p)
     defect = (sigma - flux) * root[:, None, :]
     by_element = _square(defect).sum(axis=2).T

@@ -419,7 +419,7 @@ def _record(
 ) -> Record:
     count = result.count
     chain, modes, mesh, bounds = result.chain, result.modes, result.mesh, result.bounds
-    legendre = modes.legendre(chain.elements.reference.to_legendre)
+    legendre = modes.legendre(chain.elements)
     zeros = interior_zeros(chain, modes, legendre)[:count]
     digest = problem_digest(problem)
     none = np.zeros(0)
