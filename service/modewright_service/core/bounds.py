@@ -22,9 +22,12 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from modewright_service.core.approximation import CoefficientMesh, ranges
+from modewright_service.core.approximation import CoefficientMesh, Ranges, ranges
 from modewright_service.core.comparison import Comparison, build_comparison
 from modewright_service.core.condensed import Field
+from modewright_service.core.end_comparison import end_variation
+from modewright_service.core.end_elements import EndMap
+from modewright_service.core.end_mesh import graded, inner_springs
 from modewright_service.core.modes import FluxDefect
 from modewright_service.core.problem import Resolved
 
@@ -73,17 +76,22 @@ def coefficient_terms(mesh: CoefficientMesh, lam: Array) -> Array:
     t, weight = np.polynomial.legendre.leggauss(8)
     vander = np.polynomial.legendre.legvander(t, mesh.p.shape[1] - 1).T
     lengths = np.diff(mesh.edges)
+    # end elements have terms of their own below
+    plain = mesh.plain
+    lengths = np.where(plain, lengths, 0.0)
     dx = 0.5 * lengths[:, None] * weight
     total_w = float(((mesh.w @ vander) * dx).sum())
     path = float((dx / (mesh.p @ vander)).sum())
     part = ranges(mesh, 1)
     with np.errstate(divide="ignore", invalid="ignore"):
-        depths = np.where(part.q_lower < 0.0, -part.q_lower / part.w_lower, 0.0)
-        direct = np.where(mesh.q_error > 0.0, mesh.q_error / part.w_lower, 0.0)
+        depths = np.where(plain & (part.q_lower < 0.0), -part.q_lower / part.w_lower, 0.0)
+        direct = np.where(plain & (mesh.q_error > 0.0), mesh.q_error / part.w_lower, 0.0)
     depth = float(depths.max())
     if not np.isfinite(depth):
         # w vanishes where q < 0: the deepest q against the mean weight stands in
-        depth = float(-part.q_lower.min()) * float(lengths.sum()) / total_w
+        depth = float(-part.q_lower[plain].min()) * float(lengths.sum()) / total_w
+    for element, end in mesh.end_maps:
+        depth = max(depth, _end_depth(mesh, part, element, end))
     energy = np.abs(lam) + depth
     peak = 2.0 / total_w + 2.0 * path * energy
     bounded = np.isfinite(mesh.w_error)
@@ -92,6 +100,38 @@ def coefficient_terms(mesh: CoefficientMesh, lam: Array) -> Array:
     q_term = np.minimum(2.0 * float(direct.max()), float((mesh.q_error * lengths).sum()) * peak)
     w_term = np.abs(lam) * float((mesh.w_absolute * lengths)[~bounded].sum()) * peak
     result: Array = relative * energy + q_term + w_term
+    for element, end in mesh.end_maps:
+        result += _end_term(mesh, part, element, end, energy, peak)
+    return result
+
+
+def _end_depth(mesh: CoefficientMesh, part: Ranges, element: int, end: EndMap) -> float:
+    """max(-r / w) on an end element; where r is more singular than w, beyond the distance within which half of
+    the p-energy outweighs it (the inequality of :func:`_end_term`).
+    """
+    below = -float(part.q_lower[element])
+    if below <= 0.0:
+        return 0.0
+    ratio = below / float(part.w_lower[element])
+    if end.steps == 1:
+        return ratio
+    scale = float(mesh.edges[element + 1] - mesh.edges[element]) * end.m
+    near = min(1.0, float(part.p_lower[element]) * (end.power + 1.0) ** 2 / (8.0 * scale**2 * below))
+    return 2.0 * ratio * near ** (1.0 - end.steps)
+
+
+def _end_term(
+    mesh: CoefficientMesh, part: Ranges, element: int, end: EndMap, energy: Array, peak: Array
+) -> Array:
+    """(T,) int |r - r~| u^2 at most, by Hardy's inequality: with b = m D,
+
+    int t^b v^2 dt <= 2 v(1)^2 / (b + 1) + 4 / (b + 1)^2 int t^(b+1) v_t^2 dt.
+    """
+    scale = float(mesh.edges[element + 1] - mesh.edges[element]) * end.m
+    first = end.power + 1.0
+    p_energy = energy * scale / float(part.p_lower[element])
+    size = float(mesh.q_error[element]) * scale
+    result: Array = size * (2.0 / first * peak + 4.0 / first**2 * p_energy)
     return result
 
 
@@ -159,10 +199,11 @@ def _thresholds(
     counted = np.full(trials.size, np.iinfo(np.int64).max)
     pieces = _FIRST_PIECES
     # constant elements gain nothing from more pieces
-    constant = int(_cuts(mesh, _MOST_PIECES).max()) == 1
+    constant = int(_cuts(mesh, _MOST_PIECES).max()) == 1 and not _varying_ends(mesh)
     while True:
-        cuts = _cuts(mesh, pieces)
-        comparison = build_comparison(mesh, resolved, cuts)
+        finer = _graded(mesh, pieces)
+        cuts = _cuts(finer, pieces)
+        comparison = build_comparison(finer, resolved, cuts)
         unmet = counted > wanted
         if pieces > _FIRST_PIECES and trials.size > _MANY:
             # one trial in every third gap serves all blocks; the sweeps over many pieces are what costs
@@ -181,6 +222,16 @@ def _thresholds(
         pieces = 4 * int(cuts.sum())
 
 
+def _varying_ends(mesh: CoefficientMesh) -> list[int]:
+    """The end elements on which the comparison is not exact."""
+    return [e for e, end in mesh.end_maps if end_variation(mesh, e, end) > 1e-12]
+
+
+def _graded(mesh: CoefficientMesh, pieces: int) -> CoefficientMesh:
+    """The mesh with end elements cut down, their constants' share of the error like that of `pieces` others."""
+    return graded(mesh, _varying_ends(mesh), min(1.0, 4.0 / pieces))
+
+
 def _cuts(mesh: CoefficientMesh, pieces: int) -> IntArray:
     """Pieces per element, about `pieces` in all; 1 where all three coefficients are constant.
 
@@ -194,13 +245,14 @@ def _cuts(mesh: CoefficientMesh, pieces: int) -> IntArray:
         spread: Array = np.abs(c[:, 1:]).sum(axis=1)
         return spread
 
+    lengths = np.where(mesh.plain, lengths, 0.0)
     p_mean, w_mean = np.maximum(mesh.p[:, 0], tiny), np.maximum(mesh.w[:, 0], 0.0)
     travel = lengths * np.sqrt(w_mean / p_mean)
     relative = variation(mesh.p) / p_mean + variation(mesh.w) / np.maximum(w_mean, tiny)
     q_spread = variation(mesh.q) * lengths
     q_size = max(float((np.abs(mesh.q).sum(axis=1) * lengths).sum()), tiny)
     shares = travel * np.minimum(relative, 2.0) / max(float(travel.sum()), tiny) + q_spread / q_size
-    shares = np.sqrt(np.where(shares > 1e-13 * lengths / lengths.sum(), shares, 0.0))
+    shares = np.sqrt(np.where(shares > 1e-13 * lengths / max(float(lengths.sum()), tiny), shares, 0.0))
     total = float(shares.sum())
     if total == 0.0:
         return np.ones(lengths.size, dtype=np.int64)
@@ -218,13 +270,15 @@ def _plain(thresholds: _Thresholds, count: int) -> Array:
 
 def _shift(lam: Array, mesh: CoefficientMesh, resolved: Resolved, scale: float) -> tuple[float | None, float]:
     """s and theta with (form - theta int p u'^2 + s M) >= 0; s is None where none was found."""
+    passive = all(spring >= 0.0 for _, spring in inner_springs(mesh))
     lowest_q = mesh.q[:, 0] - np.abs(mesh.q[:, 1:]).sum(axis=1)
-    passive = float(lowest_q.min()) >= 0.0
+    passive &= float(lowest_q.min()) >= 0.0
     passive &= resolved.left.stiffness >= 0.0 and resolved.right.stiffness >= 0.0
     passive &= all(joint.spring >= 0.0 for joint in resolved.joints)
     if passive:
         return (0.0 if lam[0] > 0.05 * scale else scale), 1.0
-    comparison: Comparison = build_comparison(mesh, resolved, _cuts(mesh, 512))
+    finer = _graded(mesh, 512)
+    comparison: Comparison = build_comparison(finer, resolved, _cuts(finer, 512))
     start = max(scale, -float(lam[0]))
     trials = start * np.concatenate([[0.0], 2.0 ** np.arange(-6, 40, 0.25)])
     counts = comparison.count(-trials, fraction=1.0 - _PART)

@@ -18,12 +18,13 @@ most one to the count of that problem (one negative pivot), and does so exactly 
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from modewright_service.core.approximation import CoefficientMesh, ranges
+from modewright_service.core.end_comparison import EndPiece, end_piece
 from modewright_service.core.problem import EndTerm, Resolved
 
 __all__ = ["Comparison", "build_comparison"]
@@ -41,7 +42,8 @@ class Comparison:
 
     length, p, q: (P,). w_lower, w_upper: (P,), used for nu < 0 and nu >= 0. resistance, spring, mass: (P,)
     point terms at the right end of each piece (the mass and spring before the resistance). left, right: the
-    ends. factor: u(b) / u(a) where they are coupled.
+    ends. factor: u(b) / u(a) where they are coupled. left_piece, right_piece: what stands for the end elements,
+    whose places among the pieces are left out.
     """
 
     length: Array
@@ -55,6 +57,8 @@ class Comparison:
     left: EndTerm
     right: EndTerm
     factor: complex | None = None
+    left_piece: EndPiece | None = None
+    right_piece: EndPiece | None = None
 
     @property
     def pieces(self) -> int:
@@ -76,15 +80,20 @@ def build_comparison(mesh: CoefficientMesh, resolved: Resolved, cuts: IntArray) 
     for joint in resolved.joints:
         piece = int(np.argmin(np.abs(bounds.edges[1:] - joint.x)))
         resistance[piece], spring[piece], mass[piece] = joint.resistance, joint.spring, joint.mass
+    ends: list[EndPiece | None] = [None, None]
+    for element, end in mesh.end_maps:
+        piece = 0 if element == 0 else length.size - 1
+        ends[0 if element == 0 else 1] = end_piece(mesh, bounds, element, piece, end)
+    if ends[0] is not None:
+        # what hangs on the inner node of the left end element comes after it
+        ends[0] = replace(ends[0], spring=ends[0].spring + spring[0])
+    inside = slice(0 if ends[0] is None else 1, length.size - (0 if ends[1] is None else 1))
+    arrays = (length, bounds.p_lower, bounds.q_lower, bounds.w_lower, bounds.w_upper, resistance, spring, mass)
     return Comparison(
-        length,
-        bounds.p_lower,
-        bounds.q_lower,
-        bounds.w_lower,
-        bounds.w_upper,
-        *(resistance, spring, mass),
+        *(array[inside] for array in arrays),
         *(resolved.left, resolved.right),
         resolved.factor,
+        *ends,
     )
 
 
@@ -92,13 +101,22 @@ def _count(c: Comparison, nu: Array, fraction: float, poll: Callable[[], None] |
     count = np.zeros(nu.size, dtype=np.int64)
     fixed = EndTerm(dirichlet=True)
     left, right = (c.left, c.right) if c.factor is None else (fixed, fixed)
-    u, v = _start(left, nu, fraction, count)
+    if c.left_piece is None:
+        u, v = _start(left, nu, fraction, count)
+    else:
+        u = np.ones_like(nu)
+        v, zeros = c.left_piece.stiffness(nu, fraction)
+        count += zeros
     for j, load in _loads(c, nu, poll):
         u, v = _advance(u, v, c.length[j], fraction * c.p[j], load, count)
         if c.spring[j] != 0.0 or c.mass[j] != 0.0:
             v = v + (c.spring[j] - nu * c.mass[j]) * u
         if c.resistance[j] > 0.0:
             u, v = _through(u, v, c.resistance[j] / fraction, count)
+    if c.right_piece is not None:
+        stiffness, zeros = c.right_piece.stiffness(nu, fraction)
+        count += zeros + ((v + stiffness * u) < 0.0)
+        return count
     return _finish(right, nu, fraction, u, v, count)
 
 

@@ -21,7 +21,7 @@ from .legendre import (
     vandermonde,
 )
 
-__all__ = ["EndSamples", "cut_ends", "end_samples", "factored_values", "inner_springs", "restrict", "with_ends"]
+__all__ = ["EndSamples", "cut_ends", "end_samples", "factored_values", "graded", "inner_springs", "restrict", "with_ends"]
 
 # Degree of the polynomials beside a cut end element: (y/h)^alpha on [1/2, 1] converges by 5.8 a degree.
 _DEGREE = 24
@@ -210,6 +210,17 @@ def restrict(mesh: CoefficientMesh, edges: FloatArray) -> CoefficientMesh:
 
 def _last(series: FloatArray) -> int:
     return int(np.flatnonzero(series).max(initial=0))
+
+
+def graded(mesh: CoefficientMesh, chosen: list[int], share: float) -> CoefficientMesh:
+    """The mesh with the end elements `chosen` cut down to `share` of their width, in steps of a quarter."""
+    steps = int(np.ceil(np.log(1.0 / share) / np.log(4.0))) if share < 1.0 else 0
+    edges = []
+    for element in chosen:
+        a, b = mesh.edges[element], mesh.edges[element + 1]
+        distances = (b - a) * 0.25 ** np.arange(1, steps + 1)
+        edges.append(a + distances if element == 0 else b - distances)
+    return cut_ends(mesh, np.concatenate(edges)) if edges and steps else mesh
 
 
 def with_ends(

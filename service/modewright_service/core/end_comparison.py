@@ -1,0 +1,82 @@
+"""The comparison problem on an end element: constants beside the powers, solved exactly.
+
+With P >= P-, R >= R-, W <= W+ the transformed form of :mod:`.end_elements` is bounded from below by
+
+    int c t^(1+b) v_t^2 dt + int (Q - nu W) t^b v^2 dt + S v(1)^2,   b = m D, c = P-/(h m), Q = h m R-, W = h m W+
+
+(t^(k-1) <= 1 where w has a further factor). Its solution that is regular at 0 is the hypergeometric function
+0F1(b + 1; l t), l = (Q - nu W) / c: a Bessel function. With d_n = 1 + l / (n (n + 1) d_{n+1}), the pivots of the
+symmetric tridiagonal matrix whose eigenvalues are the reciprocal zeros (Y. Ikebe, Math. Comp. 29, 1975,
+878-879), its logarithmic derivative at 1 is l / ((b + 1) d_{b+1}) and the negative pivots count its zeros in
+(0, 1).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from .coefficients import CoefficientMesh, Ranges
+from .end_elements import EndMap
+
+__all__ = ["EndPiece", "end_piece", "end_variation"]
+
+Array = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+# Pivots beyond the turning point: each gains a factor of its own size squared.
+_BEYOND = 40
+
+
+@dataclass(frozen=True)
+class EndPiece:
+    """power: b. p: c. q: Q. w_lower, w_upper: W for nu < 0 and nu >= 0. spring: S."""
+
+    power: float
+    p: float
+    q: float
+    w_lower: float
+    w_upper: float
+    spring: float
+
+    def stiffness(self, nu: Array, fraction: float) -> tuple[Array, IntArray]:
+        """(T,) flux over value at the inner node, seen from the end, and (T,) zeros inside; c times fraction."""
+        ratio = (self.q - nu * np.where(nu < 0.0, self.w_lower, self.w_upper)) / (fraction * self.p)
+        first = self.power + 1.0
+        count = np.zeros(nu.size, dtype=np.int64)
+        last = int(np.ceil(2.0 * np.sqrt(np.abs(ratio).max(initial=0.0)))) + _BEYOND
+        pivot = np.ones_like(ratio)
+        for n in range(last, -1, -1):
+            place = first + n
+            pivot = 1.0 + ratio / (place * (place + 1.0) * pivot)
+            pivot = np.where(pivot == 0.0, np.finfo(float).eps, pivot)
+            count += pivot < 0.0
+        return fraction * self.p * ratio / (first * pivot) + self.spring, count
+
+
+def end_piece(mesh: CoefficientMesh, bounds: Ranges, element: int, piece: int, end: EndMap) -> EndPiece:
+    """The comparison on an end element that is one piece of `bounds`."""
+    scale = float(mesh.edges[element + 1] - mesh.edges[element]) * end.m
+    signs = np.ones(mesh.p.shape[1]) if element == 0 else (-1.0) ** np.arange(mesh.p.shape[1])
+    inner = float((mesh.p[element] * signs).sum())
+    spring = inner * end.s * end.m / scale
+    spring -= abs(spring) * (2.0 * float(mesh.p_error[element]) + 4e-16)
+    return EndPiece(
+        end.power,
+        float(bounds.p_lower[piece]) / scale,
+        float(bounds.q_lower[piece]) * scale,
+        float(bounds.w_lower[piece]) * scale if end.steps == 1 else 0.0,
+        float(bounds.w_upper[piece]) * scale,
+        spring,
+    )
+
+
+def end_variation(mesh: CoefficientMesh, element: int, end: EndMap) -> float:
+    """How far P, R and W are from constants, relative to P and W."""
+    scale = float(mesh.edges[element + 1] - mesh.edges[element]) * end.m
+    spreads = [float(np.abs(c[element, 1:]).sum()) for c in (mesh.p, mesh.q, mesh.w)]
+    p, w = float(mesh.p[element, 0]), float(mesh.w[element, 0])
+    extra = 1.0 if end.steps > 1 else 0.0
+    return spreads[0] / p + spreads[1] * scale**2 / p + spreads[2] / w + extra
