@@ -58,7 +58,11 @@ _ARRAYS: Final[Mapping[str, str]] = {
     "left_lump": "<f8",
     "right_lump": "<f8",
     "joints": "<f8",
+    "left_map": "<f8",
+    "right_map": "<f8",
 }
+# Written only where they hold something: records without them keep their bytes.
+_OPTIONAL: Final = ("left_map", "right_map")
 _COMPLEX: Final = "<c16"
 _PER_MODE: Final = (
     *("eigenvalues", "lower", "upper", "zeros", "groups", "confirmed"),
@@ -118,6 +122,11 @@ class Record:
     left_lump, right_lump: (N,) value of the lump's own unknown in each mode (u at the end where the
         resistance is 0); shape (0,) where that end has no lump.
     joints: (J, 4): x, resistance, spring, mass of each interface, geometry included.
+    left_map, right_map: (5,) where the outermost element there lies beside a singular end, else (0,): m, s,
+        alpha, beta, gamma. With y the distance from the end, h the element's width and xi = (y/h)^(1/m), the
+        modes there are xi^(m s) times their series, in t = 2 xi - 1 at the left and 1 - 2 xi at the right; p and
+        w are (y/h)^alpha and (y/h)^gamma times theirs, and q = (y/h)^beta Q + s(s-1) p/y^2 + s (dp/dy)/y, Q
+        the series of q.
     first_index: index of the first mode.
     solve_seconds: how long the solve took; not part of the bytes.
 
@@ -149,6 +158,8 @@ class Record:
     left_lump: NDArray[np.float64] = field(default_factory=_no_array)
     right_lump: NDArray[np.float64] = field(default_factory=_no_array)
     joints: NDArray[np.float64] = field(default_factory=lambda: np.zeros((0, 4)))
+    left_map: NDArray[np.float64] = field(default_factory=_no_array)
+    right_map: NDArray[np.float64] = field(default_factory=_no_array)
     first_index: int = 0
     solve_seconds: float = 0.0
 
@@ -173,6 +184,7 @@ class Record:
         wanted: dict[str, tuple[tuple[int, ...], ...]] = dict.fromkeys(_PER_MODE[:6], ((modes,),))
         wanted["layer"] = ((elements,),)
         wanted["coefficients"] = ((modes, size),)
+        wanted["left_map"] = wanted["right_map"] = ((5,), (0,))
         wanted["left_lump"] = wanted["right_lump"] = ((modes,), (0,))
         for name, shapes in wanted.items():
             shape = getattr(self, name).shape
@@ -236,7 +248,8 @@ class Record:
         for item in fields(self):
             if item.name not in _ARRAYS and item.name != "solve_seconds":
                 scalars[item.name] = _pack(getattr(self, item.name))
-        types = {name: _stored(name, getattr(self, name)) for name in _ARRAYS}
+        written = [name for name in _ARRAYS if name not in _OPTIONAL or getattr(self, name).size]
+        types = {name: _stored(name, getattr(self, name)) for name in written}
         directory = [[name, dtype, list(getattr(self, name).shape)] for name, dtype in types.items()]
         header = json.dumps(
             {"arrays": directory, "fields": scalars},
