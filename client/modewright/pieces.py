@@ -18,7 +18,9 @@ from typing import Any, Final, Literal
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from modewright.end_pieces import end_pieces
 from modewright.record import Record
+from modewright.series import legendre_derivative_vandermonde, legendre_vandermonde
 
 __all__ = [
     "OutsideDomain",
@@ -50,32 +52,6 @@ class OutsideDomain(ValueError):
         return f"x[{self.index}] = {self.value!r} is outside the domain [{self.start!r}, {self.end!r}]"
 
 
-def legendre_vandermonde(t: NDArray[np.float64], degree: int) -> NDArray[np.float64]:
-    """(degree+1, len(t)): P_k(t) by (k+1) P_{k+1} = (2k+1) t P_k - k P_{k-1} (NIST DLMF 18.9.1)."""
-    table = np.empty((degree + 1, t.size))
-    table[0] = 1.0
-    if degree:
-        table[1] = t
-    for k in range(1, degree):
-        np.multiply(t, table[k], out=table[k + 1])
-        table[k + 1] *= (2 * k + 1) / (k + 1)
-        table[k + 1] -= (k / (k + 1)) * table[k - 1]
-    return table
-
-
-def legendre_derivative_vandermonde(t: NDArray[np.float64], degree: int) -> NDArray[np.float64]:
-    """(degree+1, len(t)): P_k'(t) by P_{k+1}' = P_{k-1}' + (2k+1) P_k (from NIST DLMF 18.9.7 and 18.9.17)."""
-    table = np.zeros((degree + 1, t.size))
-    if degree == 0:
-        return table
-    values = legendre_vandermonde(t, degree - 1)
-    table[1] = 1.0
-    for k in range(1, degree):
-        np.multiply(values[k], 2 * k + 1, out=table[k + 1])
-        table[k + 1] += table[k - 1]
-    return table
-
-
 class Pieces:
     """The modes of a record as functions.
 
@@ -87,12 +63,14 @@ class Pieces:
     def __init__(self, record: Record) -> None:
         self.record = record
         self._offsets = record.offsets
+        self._ends = {piece.element: piece for piece in end_pieces(record)}
 
     # ---- where a point is ----
 
     def locate(self, x: ArrayLike, side: Side = "right") -> tuple[NDArray[np.intp], NDArray[np.float64]]:
         """For each point (flattened) its element and its t in [-1, 1]. Raises OutsideDomain.
 
+        On an element beside a singular end t is xi in [0, 1], 0 at the end (:mod:`.end_pieces`).
         Points beyond an end by no more than 16 units in the last place are taken as the end.
         """
         if side not in ("right", "left"):
@@ -110,6 +88,9 @@ class Pieces:
         np.clip(element, 0, edges.size - 2, out=element)
         left, right = edges[element], edges[element + 1]
         t = ((points - left) - (right - points)) / (right - left)
+        for piece in self._ends.values():
+            there = element == piece.element
+            t[there] = piece.coordinate(points[there])
         return element, t
 
     # ---- values ----
@@ -178,12 +159,9 @@ class Pieces:
         if np.any(np.diff(element) < 0):
             order = np.argsort(element, kind="stable")
             element, t, points = element[order], t[order], points[order]
-        out = self.at(element, t, matrix, derivative=quantity != "value")
-        if quantity in ("flux", "flux-density"):
-            factor = self.coefficient_at("p", element, t)
-            if quantity == "flux-density":
-                factor = -factor / points**self.record.geometry
-            out *= factor
+        out = np.empty((matrix.shape[0], t.size), matrix.dtype)
+        for chunk in _slices(t.size):
+            self._fill(matrix, element[chunk], t[chunk], points[chunk], quantity, out[:, chunk])
         if order is not None:
             unsorted = np.empty_like(out)
             unsorted[:, order] = out
@@ -207,8 +185,10 @@ class Pieces:
         if matrix is None:
             matrix = self.record.coefficients
         out = np.empty((matrix.shape[0], t.size), matrix.dtype)
+        quantity: Quantity = "derivative" if derivative else "value"
         for chunk in _slices(t.size):
-            self._fill(matrix, element[chunk], t[chunk], derivative, out[:, chunk])
+            # the place itself matters for flux densities only
+            self._fill(matrix, element[chunk], t[chunk], t[chunk], quantity, out[:, chunk])
         return out
 
     def coefficient_at(
@@ -220,6 +200,9 @@ class Pieces:
         for chunk in _slices(t.size):
             table = legendre_vandermonde(t[chunk], series.shape[1] - 1)
             out[chunk] = np.einsum("pk,kp->p", series[element[chunk]], table)
+        for piece in self._ends.values():
+            there = element == piece.element
+            out[there] = piece.coefficient(name, t[there])
         return out
 
     def _fill(
@@ -227,7 +210,8 @@ class Pieces:
         matrix: NDArray[Any],
         element: NDArray[np.intp],
         t: NDArray[np.float64],
-        derivative: bool,
+        x: NDArray[np.float64],
+        quantity: Quantity,
         out: NDArray[Any],
     ) -> None:
         """One chunk of points, sorted by element, into `out` (M, points)."""
@@ -235,16 +219,30 @@ class Pieces:
         starts = np.flatnonzero(np.diff(element, prepend=-1))
         present = element[starts]
         degree = int(record.degrees[present].max())
-        if derivative:
-            table = legendre_derivative_vandermonde(t, degree)
-            width = record.edges[element + 1] - record.edges[element]
-            table *= 2.0 / width
-        else:
+        if quantity == "value":
             table = legendre_vandermonde(t, degree)
+        else:
+            table = legendre_derivative_vandermonde(t, degree)
+            factor = 2.0 / (record.edges[element + 1] - record.edges[element])
+            if quantity != "derivative":
+                factor *= self.coefficient_at("p", element, t)
+            if quantity == "flux-density":
+                # at a centre the end element has its own rule
+                radius = np.where(x != 0.0, x, 1.0) if self._ends else x
+                factor /= -(radius**record.geometry)
+            table *= factor
         stops = np.append(starts[1:], t.size)
         for e, start, stop in zip(present.tolist(), starts.tolist(), stops.tolist(), strict=True):
-            first, last = offsets[e], offsets[e + 1]
-            out[:, start:stop] = matrix[:, first:last] @ table[: last - first, start:stop]
+            series = matrix[:, offsets[e] : offsets[e + 1]]
+            piece = self._ends.get(e)
+            if piece is None:
+                out[:, start:stop] = series @ table[: series.shape[1], start:stop]
+            elif quantity == "value":
+                out[:, start:stop] = piece.values(series, t[start:stop])
+            else:
+                out[:, start:stop] = piece.derivatives(series, t[start:stop], quantity)
+                if quantity == "flux-density" and not piece.centre:
+                    out[:, start:stop] /= x[start:stop] ** record.geometry
 
 
 def _slices(size: int) -> Iterator[slice]:

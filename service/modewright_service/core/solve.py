@@ -23,6 +23,7 @@ from modewright_service.core.clusters import OpenChain
 from modewright_service.core.condensed import Chain, build_chain
 from modewright_service.core.digest import ALGORITHM_VERSION, problem_digest, selection_key
 from modewright_service.core.elements import build_elements
+from modewright_service.core.end_elements import EndMap
 from modewright_service.core.errors import (
     CoreError,
     InvalidProblem,
@@ -453,9 +454,15 @@ def _record(
             [[joint.x, joint.resistance, joint.spring, joint.mass] for joint in resolved.joints],
             dtype=np.float64,
         ).reshape(-1, 4),
+        left_map=_exponents(mesh.left_map),
+        right_map=_exponents(mesh.right_map),
         first_index=result.first,
         solve_seconds=seconds,
     )
+
+
+def _exponents(end: EndMap | None) -> Array:
+    return np.array([] if end is None else [end.m, end.s, end.alpha, end.q_exponent, end.gamma])
 
 
 def _has_lump(end: EndTerm) -> bool:
