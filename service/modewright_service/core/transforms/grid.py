@@ -10,9 +10,12 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
+from modewright.end_pieces import EndPiece, end_pieces
 from modewright.pieces import Pieces
 from modewright.record import Record
 from modewright_service.core.quadrature import gauss_counts, place_nodes
+
+from .end_grid import end_nodes
 
 __all__ = ["Grid", "build_grid", "lump_mass"]
 
@@ -27,7 +30,8 @@ _CHUNK: Final = 4096
 class Grid:
     """X points in ascending order with the weights of the inner product, point masses at interfaces included.
 
-    element, t: the element of the basis that a point is in, and its coordinate there, in [-1, 1].
+    element, t: the element of the basis that a point is in, and its coordinate there, in [-1, 1]; in [0, 1]
+    beside a singular end (:mod:`modewright.end_pieces`).
     interval: the interval of the field that it is in. x: the point. weight: quadrature weight times w.
     """
 
@@ -72,20 +76,44 @@ def build_grid(record: Record, bounds: Floats, degree: int) -> Grid:
     middle = (breaks[:-1] + breaks[1:]) / 2.0
     element = np.clip(np.searchsorted(edges, middle, side="right") - 1, 0, edges.size - 2)
     interval = np.clip(np.searchsorted(bounds, middle, side="right") - 1, 0, bounds.size - 2)
-    left, right = edges[element], edges[element + 1]
+    pieces = end_pieces(record)
+    ends = [piece.element for piece in pieces]
+    chosen = np.flatnonzero(~np.isin(element, ends))
+    grid = _plain(record, element[chosen], interval[chosen], breaks[chosen], breaks[chosen + 1], degree)
+    for piece in pieces:
+        parts = np.flatnonzero(element == piece.element)
+        grid = _joined(grid, piece, breaks[parts[0] : parts[-1] + 2], interval[parts], degree)
+    return _with_masses(grid, bounds)
+
+
+def _plain(
+    record: Record, element: Indices, interval: Indices, start: Floats, stop: Floats, degree: int
+) -> Grid:
+    """Points on parts from `start` to `stop` of plain elements."""
+    left, right = record.edges[element], record.edges[element + 1]
     # Both ends by the same formula, exact at the element's own ends.
-    lower, upper = (((x - left) - (right - x)) / (right - left) for x in (breaks[:-1], breaks[1:]))
+    lower, upper = (((x - left) - (right - x)) / (right - left) for x in (start, stop))
     counts = gauss_counts(
         lower, upper, record.degrees[element].astype(np.int64), _weight_degrees(record)[element], degree
     )
     nodes = place_nodes(counts)
     part, s = nodes.part, nodes.s
-    half = (breaks[1:] - breaks[:-1])[part] / 2.0
+    half = (stop - start)[part] / 2.0
     t = ((1.0 - s) * lower[part] + (1.0 + s) * upper[part]) / 2.0
-    x = breaks[:-1][part] + half * (1.0 + s)
+    x = start[part] + half * (1.0 + s)
     element, interval = element[part], interval[part]
     weight = nodes.weight * half * Pieces(record).coefficient_at("w", element, t)
-    return _with_masses(Grid(record, element, t, interval, x, weight), bounds)
+    return Grid(record, element, t, interval, x, weight)
+
+
+def _joined(grid: Grid, piece: EndPiece, breaks: Floats, interval: Indices, degree: int) -> Grid:
+    """The grid with the points of an end element, first or last."""
+    found = end_nodes(piece, breaks, int(grid.record.degrees[piece.element]), degree)
+    element = np.full(found.x.size, piece.element, dtype=np.intp)
+    own = (element, found.xi, interval[found.part], found.x, found.weight)
+    others = (grid.element, grid.t, grid.interval, grid.x, grid.weight)
+    pairs = zip(own, others, strict=True) if piece.left else zip(others, own, strict=True)
+    return Grid(grid.record, *(np.concatenate(pair) for pair in pairs))
 
 
 def lump_mass(record: Record, side: str) -> float:
