@@ -28,6 +28,9 @@ IntArray = NDArray[np.int64]
 
 # Pivots beyond the turning point: each gains a factor of its own size squared.
 _BEYOND = 40
+# Decay so steep that the pivots are not followed to where they settle; a bound is taken instead.
+_STEEP = 1e6
+_EPS = float(np.finfo(float).eps)
 
 
 @dataclass(frozen=True)
@@ -46,14 +49,22 @@ class EndPiece:
         ratio = (self.q - nu * np.where(nu < 0.0, self.w_lower, self.w_upper)) / (fraction * self.p)
         first = self.power + 1.0
         count = np.zeros(nu.size, dtype=np.int64)
-        last = int(np.ceil(2.0 * np.sqrt(np.abs(ratio).max(initial=0.0)))) + _BEYOND
-        pivot = np.ones_like(ratio)
+        turning = np.sqrt(np.maximum(-ratio, 0.0).max(initial=0.0))
+        decaying = np.sqrt(np.clip(ratio, 0.0, _STEEP).max(initial=0.0))
+        last = int(np.ceil(2.0 * turning + 10.0 * np.sqrt(decaying))) + _BEYOND
+        # where the pivots hardly change any more; exact enough for what is left to come
+        place = first + last
+        pivot = 0.5 + np.sqrt(0.25 + np.maximum(ratio, 0.0) / (place * (place + 1.0)))
         for n in range(last, -1, -1):
             place = first + n
             pivot = 1.0 + ratio / (place * (place + 1.0) * pivot)
-            pivot = np.where(pivot == 0.0, np.finfo(float).eps, pivot)
+            pivot = np.where(pivot == 0.0, _EPS, pivot)
             count += pivot < 0.0
-        return fraction * self.p * ratio / (first * pivot) + self.spring, count
+        stiffness = fraction * self.p * ratio / (first * pivot)
+        steep = ratio > _STEEP
+        # I_{b+1} / I_b is 1 to the order of 1 / x there, x = 2 sqrt(l)
+        stiffness[steep] *= 1.0 - 1.0 / np.sqrt(ratio[steep])
+        return stiffness + self.spring, count
 
 
 def end_piece(mesh: CoefficientMesh, bounds: Ranges, element: int, piece: int, end: EndMap) -> EndPiece:
