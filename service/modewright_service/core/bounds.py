@@ -131,7 +131,11 @@ def _end_term(
     first = end.power + 1.0
     p_energy = energy * scale / float(part.p_lower[element])
     size = float(mesh.q_error[element]) * scale
-    result: Array = size * (2.0 / first * peak + 4.0 / first**2 * p_energy)
+    # v(1)^2 is no more than the peak, nor than what the spring p(h) s / h lets the energy have
+    at_node = peak
+    if end.s > 0.0:
+        at_node = np.minimum(peak, p_energy / (end.m * end.s))
+    result: Array = size * (2.0 / first * at_node + 4.0 / first**2 * p_energy)
     return result
 
 

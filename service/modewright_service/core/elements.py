@@ -168,7 +168,8 @@ def build_elements(mesh: CoefficientMesh, degree: int) -> Elements:
     """Matrices and decompositions of all elements of `mesh`, shape functions of `degree` >= 2."""
     orders = mesh.p.shape[1] - 1
     # exact for shape * shape * coefficient, and for (q - lambda w) u against Legendre degree k + d
-    ref = reference(degree, degree + orders + 2)
+    extra = max((end.steps - 1 for _, end in mesh.end_maps), default=0)
+    ref = reference(degree, degree + orders + 2 + extra)
     coefficient_values = _legendre(ref.points, orders).T
     p, q, w = mesh.p @ coefficient_values, mesh.q @ coefficient_values, mesh.w @ coefficient_values
     half = 0.5 * np.diff(mesh.edges)

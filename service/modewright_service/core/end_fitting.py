@@ -41,7 +41,7 @@ _MOST_TRIALS = 60
 _MOST_VARIATION = 30.0
 _CHECKS = 7
 # Largest whole number b = m kappa tried: higher ones crowd the functions towards the end.
-_MOST_STEPS = 3
+_MOST_STEPS = 8
 
 
 def choose_map(alpha: float, gamma: float, d: float, delta: float, condition: str) -> EndMap:
@@ -49,7 +49,7 @@ def choose_map(alpha: float, gamma: float, d: float, delta: float, condition: st
 
     condition: "principal", "dirichlet" or "neumann". delta: inf where the coefficients are pure powers.
     v is then a series in y^kappa and y^delta, kappa = 2 + gamma - alpha; m = b / kappa makes both whole powers
-    of t where some b <= 3 does, else y^kappa alone.
+    of t where some b <= 8 does, else y^kappa alone.
     """
     kappa = 2.0 + gamma - alpha
     # (1 - alpha + D) / 2; a natural end of a regular problem takes the other exponent, 0
@@ -161,7 +161,9 @@ def _fitted(
     if float(values.p.min()) <= 0.0 or float(values.w.min()) <= 0.0:
         return None
     series = [column @ project for column in (values.p, values.r, values.w)]
-    floors = (float(values.p.min()), float(values.p.min()), float(values.w.min()))
+    # without s nothing in r goes back to p
+    r_size = float(values.p.min()) if end.s else float(np.abs(values.r).max())
+    floors = (float(values.p.min()), r_size, float(values.w.min()))
     tails = [float(np.abs(c[-3:]).sum()) * lebesgue(_DEGREE) for c in series]
     if any(tail > _TOLERANCE * floor for tail, floor in zip(tails, floors, strict=True)):
         return None
@@ -176,8 +178,11 @@ def _fitted(
     # r / t: what r is at t = 0 is the rounding of s
     side = -1 if left else 1
     reduced = np.append(2 * divided_by_distance(series[1], side), EXTENDED(0)) / EXTENDED(width) ** 2
-    growth = _DEGREE**2 * tails[1] / width**2
-    sizes = (floors[0], max(floors[1] / width**2, float(np.abs(reduced).max())), floors[2])
+    # an error of r y^2 that vanishes at the end, in the inequality of bounds._end_term
+    power = end.power
+    growth = min(_DEGREE**2, (1.0 + 1.0 / power) ** 2 if power > 0.0 else np.inf) * tails[1] / width**2
+    largest = float(np.abs(reduced).max())
+    sizes = (floors[0], max(floors[1] / width**2, largest) if end.s else largest, floors[2])
     rounded = []
     for c, size in zip((series[0], reduced, series[2]), sizes, strict=True):
         short = c.astype(np.float64)

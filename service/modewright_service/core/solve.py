@@ -24,6 +24,7 @@ from modewright_service.core.condensed import Chain, build_chain
 from modewright_service.core.digest import ALGORITHM_VERSION, problem_digest, selection_key
 from modewright_service.core.elements import build_elements
 from modewright_service.core.end_elements import EndMap
+from modewright_service.core.end_mesh import comparable_weight, roomy
 from modewright_service.core.errors import (
     CoreError,
     InvalidProblem,
@@ -156,18 +157,20 @@ def _without_offset(mesh: CoefficientMesh, scale: float) -> tuple[CoefficientMes
     Then lambda - c is solved for, with a mesh and bounds that know nothing of the offset. c is the number
     nearest to 0 between the least and the largest q / w, so that |q - c w| is nowhere larger than |q|.
     """
+    original, mesh = mesh, roomy(mesh)
     t = np.linspace(-1.0, 1.0, 2 * mesh.q.shape[1] + 1)
     vander = np.polynomial.legendre.legvander(t, mesh.q.shape[1] - 1).T
-    q, w = mesh.q @ vander, mesh.w @ vander
+    weight = comparable_weight(mesh)
+    q, w = mesh.q @ vander, weight @ vander
     heavy = w > 0.0
     with np.errstate(over="ignore"):
         ratio = q[heavy] / w[heavy]
     c = float(np.clip(0.0, ratio.min(), ratio.max()))
     if not scale < abs(c) < np.inf:
-        return mesh, 0.0
-    rounding = 2.0 * _EPS * (np.abs(mesh.q).sum(axis=1) + abs(c) * np.abs(mesh.w).sum(axis=1))
+        return original, 0.0
+    rounding = 2.0 * _EPS * (np.abs(mesh.q).sum(axis=1) + abs(c) * np.abs(weight).sum(axis=1))
     error = mesh.q_error + abs(c) * mesh.w_absolute + rounding
-    return replace(mesh, q=mesh.q - c * mesh.w, q_error=error), c
+    return replace(mesh, q=mesh.q - c * weight, q_error=error), c
 
 
 def _moved_back(record: Record, c: float, coefficients: CoefficientMesh) -> Record:
