@@ -58,8 +58,18 @@ class EndPiece:
     def _t(self, xi: Floats) -> Floats:
         return 2.0 * xi - 1.0 if self.left else 1.0 - 2.0 * xi
 
-    def _slope(self, series: NDArray[Any], xi: Floats) -> NDArray[Any]:
-        """d/dxi of series (..., k+1): (..., P)."""
+    @property
+    def flat(self) -> int:
+        """The order to which v_xi vanishes at a natural end of a regular problem, where p has infinite 1/p."""
+        return int(np.floor(self.m * (1.0 - self.alpha) + 1e-9)) if self.s == 0.0 and self.alpha < 1.0 else 0
+
+    def _slope(self, series: NDArray[Any], xi: Floats, divided: int = 0) -> NDArray[Any]:
+        """d/dxi of series (..., k+1), divided by xi so many times: (..., P)."""
+        if divided:
+            slopes = _differentiated(series) * (2.0 if self.left else -2.0)
+            for _ in range(divided):
+                slopes = 2.0 * _divided_by_distance(slopes, -1 if self.left else 1)
+            return slopes @ legendre_vandermonde(self._t(xi), slopes.shape[-1] - 1)
         table = legendre_derivative_vandermonde(self._t(xi), series.shape[-1] - 1)
         slope: NDArray[Any] = series @ table * (2.0 if self.left else -2.0)
         return slope
@@ -71,7 +81,7 @@ class EndPiece:
 
     def derivatives(self, series: NDArray[Any], xi: Floats, quantity: str) -> NDArray[Any]:
         """(M, P): u', p u' or -(p u')/x^g along +x, from the series (M, k+1) of v."""
-        slope = self._slope(series, xi) / self.m
+        slope = self._slope(series, xi, self.flat) / self.m
         power = self.s - 1.0
         factor = (1.0 if self.left else -1.0) / self.width
         if quantity != "derivative":
@@ -81,7 +91,7 @@ class EndPiece:
             power -= self.centre
             factor = -factor / self.width**self.centre
         if self.s == 0.0:
-            return _times_power(slope * factor, xi, self.m * power + 1.0)
+            return _times_power(slope * factor, xi, self.m * power + 1.0 + self.flat)
         table = legendre_vandermonde(self._t(xi), series.shape[-1] - 1)
         return _times_power((self.s * (series @ table) + xi * slope) * factor, xi, self.m * power)
 
@@ -107,6 +117,26 @@ class EndPiece:
     def _sum(self, series: Floats, xi: Floats) -> Floats:
         result: Floats = series @ legendre_vandermonde(self._t(xi), series.size - 1)
         return result
+
+
+def _differentiated(series: NDArray[Any]) -> NDArray[Any]:
+    """Series of d/dt: c'_k = (2k+1) (c_{k+1} + c_{k+3} + ...) (NIST DLMF 18.9.18)."""
+    result = np.zeros_like(series)
+    for k in range(series.shape[-1] - 1):
+        result[..., k] = (2 * k + 1) * series[..., k + 1 :: 2].sum(axis=-1)
+    return result
+
+
+def _divided_by_distance(series: NDArray[Any], side: int) -> NDArray[Any]:
+    """The series f with (1 + t) f (side -1) or (1 - t) f (side 1) equal to `series`, which vanishes there."""
+    degree = series.shape[-1] - 1
+    quotient = np.zeros((*series.shape[:-1], degree + 2), dtype=series.dtype)
+    # t P_k = ((k+1) P_{k+1} + k P_{k-1}) / (2k+1) (NIST DLMF 18.9.1), from the highest coefficient down
+    for k in range(degree - 1, -1, -1):
+        value = series[..., k + 1] - quotient[..., k + 1]
+        value = value + side * quotient[..., k + 2] * (k + 2) / (2 * k + 5)
+        quotient[..., k] = -side * value * (2 * k + 1) / (k + 1)
+    return quotient[..., : max(degree, 1)]
 
 
 def _times_power(values: NDArray[Any], xi: Floats, power: float) -> NDArray[Any]:

@@ -24,9 +24,9 @@ def test_rule_integrates_powers(power: float) -> None:
 @pytest.mark.parametrize("power", [-0.5, 0.0, 2.5])
 def test_running_integral(power: float) -> None:
     """t^-b int_0^t x^b x^3 dx = t^4 / (b + 4)."""
-    r = end_reference(16, 20, power, 1, True)
+    r = end_reference(16, 20, power, 0, 0, True)
     np.testing.assert_allclose(r.running @ r.t**3, r.t**4 / (power + 4.0), rtol=1e-14, atol=1e-16)
-    mirrored = end_reference(16, 20, power, 1, False)
+    mirrored = end_reference(16, 20, power, 0, 0, False)
     np.testing.assert_allclose(mirrored.running, -r.running, rtol=0.0, atol=0.0)
 
 
@@ -39,7 +39,7 @@ def test_bessel_zeros_on_one_element(order: int) -> None:
     end = EndMap(0.5, float(order), 1.0, 1.0)
     assert end.power == order
     assert end.steps == 1
-    r = end_reference(24, 28, end.power, end.steps, True)
+    r = end_reference(24, 28, end.power, end.w_steps, end.flat, True)
     stiff = r.slopes.T @ (r.slopes * (r.weights * r.t / end.m)[:, None])
     mass = r.values.T @ (r.values * (r.weights * end.m)[:, None])
     factor = np.linalg.cholesky(stiff[2:, 2:])

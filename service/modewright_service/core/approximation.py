@@ -55,6 +55,9 @@ _LOOKS = 32
 _BATCH = 2048
 # Share of its layer that an end element has at most.
 _END_SHARE = 0.25
+# Factor from one cut to the next beside an end element, and the share of the layer up to which it is cut so.
+_GRADING = 2.0
+_SHORT = 1e-9
 # Share of a layer at which a coefficient is looked at beside an end where it is infinite.
 _JUST_INSIDE = 1e-6
 
@@ -117,7 +120,7 @@ def approximate(
     scales = _q_scales(parts, edges)
     rows = _Rows()
     total = len(problem.layers)
-    outer = _outer_elements(parts, edges, joints, ends, poll)
+    outer = _outer_elements(parts, edges, joints, ends, scales, poll)
     bounds = edges.copy()
     for k, found in ((0, outer[0]), (-1, outer[1])):
         if found is not None:
@@ -125,6 +128,7 @@ def approximate(
     for index, part in enumerate(parts):
         left, right = float(bounds[index]), float(bounds[index + 1])
         inside = [x for x in joints if left < x < right]
+        inside += _graded(index, edges, bounds)
         if isinstance(part[0], tuple):
             _add_constant(rows, part, index, [left, *inside, right], max_degree)
             continue
@@ -153,7 +157,7 @@ def _has_end(index: int, total: int, ends: Ends) -> bool:
 
 
 def _outer_elements(
-    parts: list[_Part], edges: FloatArray, joints: list[float], ends: Ends, poll: Poll
+    parts: list[_Part], edges: FloatArray, joints: list[float], ends: Ends, scales: list[float], poll: Poll
 ) -> tuple[CoefficientMesh | None, CoefficientMesh | None]:
     """The end elements, each well within its layer and clear of interfaces, knots and switches."""
     found: list[CoefficientMesh | None] = []
@@ -175,8 +179,24 @@ def _outer_elements(
                 first, last = (near[0] + just_inside, near[1]) if at_left else (near[0], near[1] - just_inside)
                 inside += find_cuts(source.program, None, first, last, source.signed).points
         widest = min([_END_SHARE * span, *(0.5 * abs(x - place) for x in inside)])
-        found.append(fit_end(sources, place, at_left, end, widest, index, poll))
+        found.append(fit_end(sources, place, at_left, end, widest, index, scales[index] * span, poll))
     return found[0], found[1]
+
+
+def _graded(index: int, edges: FloatArray, bounds: FloatArray) -> list[float]:
+    """Cuts from an end element on, at distances that grow by a factor, where it is very short.
+
+    Halving stops at a share of the layer; what is steep beside a short end element must not.
+    """
+    found = []
+    span = float(edges[index + 1] - edges[index])
+    for k, place in ((index, float(edges[0])), (index + 1, float(edges[-1]))):
+        y = abs(float(bounds[k]) - place)
+        if k in (0, len(edges) - 1) and y > 0.0:
+            inward = 1.0 if k == 0 else -1.0
+            while (y := y * _GRADING) < _SHORT * span:
+                found.append(place + inward * y)
+    return found
 
 
 def _constants(layer: Layer, index: int) -> list[tuple[float, float]] | None:

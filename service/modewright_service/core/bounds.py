@@ -113,17 +113,17 @@ def _end_depth(mesh: CoefficientMesh, part: Ranges, element: int, end: EndMap) -
     if below <= 0.0:
         return 0.0
     ratio = below / float(part.w_lower[element])
-    if end.steps == 1:
+    if end.w_steps == 0:
         return ratio
     scale = float(mesh.edges[element + 1] - mesh.edges[element]) * end.m
     near = min(1.0, float(part.p_lower[element]) * (end.power + 1.0) ** 2 / (8.0 * scale**2 * below))
-    return 2.0 * ratio * near ** (1.0 - end.steps)
+    return 2.0 * ratio * near ** (-end.w_steps)
 
 
 def _end_term(
     mesh: CoefficientMesh, part: Ranges, element: int, end: EndMap, energy: Array, peak: Array
 ) -> Array:
-    """(T,) int |r - r~| u^2 at most, by Hardy's inequality: with b = m D,
+    """(T,) int |r - r~| u^2 at most, by Hardy's inequality: with b = m D + f,
 
     int t^b v^2 dt <= 2 v(1)^2 / (b + 1) + 4 / (b + 1)^2 int t^(b+1) v_t^2 dt.
     """

@@ -183,6 +183,9 @@ def build_elements(mesh: CoefficientMesh, degree: int) -> Elements:
         stiff_p[one] = _products(own.slopes, p[one] * own.weights)
         stiff_q[one] = _products(own.values, q[one] * own.weights)
         masses[one] = _products(own.values, w[one] * own.weights)
+        # bubbles that are zero get an energy, so that they stay zero
+        empty = np.flatnonzero(~own.values[:, 2:].any(axis=0)) + 2
+        stiff_p[e, empty, empty] = 1.0
     shift = _shifts(stiff_p[:, 2:, 2:], stiff_q[:, 2:, 2:], masses[:, 2:, 2:], q, w)
     s = shift[:, None, None]
     no_p = stiff_q + s * masses
@@ -215,13 +218,13 @@ def _ends(
     """Shape functions of the end elements; their rows of p, q, w, half and weights are written in place."""
     found = []
     for e, end in mesh.end_maps:
-        own = end_reference(ref.degree, ref.points.size, end.power, end.steps, e == 0)
+        own = end_reference(ref.degree, ref.points.size, end.power, end.w_steps, end.flat, e == 0)
         tau = 2.0 * own.t - 1.0 if e == 0 else 1.0 - 2.0 * own.t
         scale = float(mesh.edges[e + 1] - mesh.edges[e]) * end.m
         table = _legendre(tau, mesh.p.shape[1] - 1)
-        p[e] = (table @ mesh.p[e]) * own.t / scale
+        p[e] = (table @ mesh.p[e]) * own.t ** (1 - end.flat) / scale
         q[e] = (table @ mesh.q[e]) * scale
-        w[e] = (table @ mesh.w[e]) * own.t ** (end.steps - 1) * scale
+        w[e] = (table @ mesh.w[e]) * own.t**end.w_steps * scale
         half[e] = 1.0
         weights[e] = own.weights
         found.append((e, own))

@@ -4,7 +4,8 @@ With P >= P-, R >= R-, W <= W+ the transformed form of :mod:`.end_elements` is b
 
     int c t^(1+b) v_t^2 dt + int (Q - nu W) t^b v^2 dt + S v(1)^2,   b = m D, c = P-/(h m), Q = h m R-, W = h m W+
 
-(t^(k-1) <= 1 where w has a further factor). Its solution that is regular at 0 is the hypergeometric function
+(t^(k-1) <= 1 where w has a further factor; at a flat end the load has t^f more, and x = t^(1+f) in the place of t
+makes the same of it, b then m D / (1 + f)). Its solution that is regular at 0 is the hypergeometric function
 0F1(b + 1; l t), l = (Q - nu W) / c: a Bessel function. With d_n = 1 + l / (n (n + 1) d_{n+1}), the pivots of the
 symmetric tridiagonal matrix whose eigenvalues are the reciprocal zeros (Y. Ikebe, Math. Comp. 29, 1975,
 878-879), its logarithmic derivative at 1 is l / ((b + 1) d_{b+1}) and the negative pivots count its zeros in
@@ -35,9 +36,10 @@ _EPS = float(np.finfo(float).eps)
 
 @dataclass(frozen=True)
 class EndPiece:
-    """power: b. p: c. q: Q. w_lower, w_upper: W for nu < 0 and nu >= 0. spring: S."""
+    """power: b. stretch: 1 + f. p: c times stretch^2. q: Q. w_lower, w_upper: W for nu < 0 and nu >= 0. spring: S."""
 
     power: float
+    stretch: float
     p: float
     q: float
     w_lower: float
@@ -60,7 +62,7 @@ class EndPiece:
             pivot = 1.0 + ratio / (place * (place + 1.0) * pivot)
             pivot = np.where(pivot == 0.0, _EPS, pivot)
             count += pivot < 0.0
-        stiffness = fraction * self.p * ratio / (first * pivot)
+        stiffness = fraction * self.p * ratio / (self.stretch * first * pivot)
         steep = ratio > _STEEP
         # I_{b+1} / I_b is 1 to the order of 1 / x there, x = 2 sqrt(l)
         stiffness[steep] *= 1.0 - 1.0 / np.sqrt(ratio[steep])
@@ -71,14 +73,16 @@ def end_piece(mesh: CoefficientMesh, bounds: Ranges, element: int, piece: int, e
     """The comparison on an end element that is one piece of `bounds`."""
     scale = float(mesh.edges[element + 1] - mesh.edges[element]) * end.m
     signs = np.ones(mesh.p.shape[1]) if element == 0 else (-1.0) ** np.arange(mesh.p.shape[1])
+    stretch = 1.0 + end.flat
     inner = float((mesh.p[element] * signs).sum())
     spring = inner * end.s * end.m / scale
     spring -= abs(spring) * (2.0 * float(mesh.p_error[element]) + 4e-16)
     return EndPiece(
-        end.power,
-        float(bounds.p_lower[piece]) / scale,
+        (end.power - end.flat) / stretch,
+        stretch,
+        float(bounds.p_lower[piece]) * stretch**2 / scale,
         float(bounds.q_lower[piece]) * scale,
-        float(bounds.w_lower[piece]) * scale if end.steps == 1 else 0.0,
+        float(bounds.w_lower[piece]) * scale if end.w_steps == 0 else 0.0,
         float(bounds.w_upper[piece]) * scale,
         spring,
     )
@@ -89,5 +93,5 @@ def end_variation(mesh: CoefficientMesh, element: int, end: EndMap) -> float:
     scale = float(mesh.edges[element + 1] - mesh.edges[element]) * end.m
     spreads = [float(np.abs(c[element, 1:]).sum()) for c in (mesh.p, mesh.q, mesh.w)]
     p, w = float(mesh.p[element, 0]), float(mesh.w[element, 0])
-    extra = 1.0 if end.steps > 1 else 0.0
+    extra = 1.0 if end.w_steps > 0 else 0.0
     return spreads[0] / p + spreads[1] * scale**2 / p + spreads[2] / w + extra

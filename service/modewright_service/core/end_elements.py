@@ -15,6 +15,11 @@ so that one Gauss-Jacobi rule serves them all, and v is as smooth in t as P, R a
 natural for v: it carries no unknown of its own. Basis: 1 (the inner node's function) and (1 - t)
 P_j^(2, beta)(2t - 1), beta = m D + b - 1, orthogonal under the weight of the mass: with Legendre polynomials
 instead, high exponents lose all digits.
+
+At a natural end of a regular problem, s = 0 and D = alpha - 1 < 0, so that polynomials have no finite energy where
+m D <= -1. There v_t vanishes like t^f, f = floor(-m D): the common weight is t^(m D + f), the factors above are
+divided by t^f, r = (y/h)^(alpha - 2 + (1 + f)/m) R, and the basis is 1 and int_t^1 x^f Q_j dx with polynomials Q_j
+orthogonal under the weight of the energy.
 """
 
 from __future__ import annotations
@@ -27,7 +32,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import eigvalsh_tridiagonal
 
-from modewright_service.core.legendre import EXTENDED, projector
+from modewright_service.core.legendre import EXTENDED, gauss, projector
 
 __all__ = ["EndMap", "EndReference", "end_reference", "jacobi_rule"]
 
@@ -44,9 +49,19 @@ class EndMap:
     gamma: float
 
     @property
+    def flat(self) -> int:
+        """f, the order to which v_t vanishes at the end whatever the mode."""
+        return int(np.floor(self.m * (1.0 - self.alpha) + 1e-9)) if self.s == 0.0 and self.alpha < 1.0 else 0
+
+    @property
     def power(self) -> float:
-        """m D, the exponent of the weight that all integrals share; above -1."""
-        return self.m * (self.alpha + 2.0 * self.s - 1.0)
+        """m D + f, the exponent of the weight that all integrals share; above -1."""
+        return self.m * (self.alpha + 2.0 * self.s - 1.0) + self.flat
+
+    @property
+    def w_steps(self) -> int:
+        """b - 1 - f, the power of t that the mass has beside the common weight."""
+        return self.steps - 1 - self.flat
 
     @property
     def steps(self) -> int:
@@ -56,7 +71,7 @@ class EndMap:
     @property
     def q_exponent(self) -> float:
         """That of r, of which (y/h)^q_exponent is divided out."""
-        return self.alpha - 2.0 + 1.0 / self.m
+        return self.alpha - 2.0 + (1.0 + self.flat) / self.m
 
 
 def _recurrence(count: int, a: Any, b: Any) -> tuple[Any, Any]:
@@ -144,19 +159,25 @@ class EndReference:
 
 
 @lru_cache(maxsize=64)
-def end_reference(degree: int, points: int, power: float, steps: int, left: bool) -> EndReference:
-    """Shape functions for m D = power and b = steps at `points` Gauss-Jacobi points (cached, read-only)."""
+def end_reference(degree: int, points: int, power: float, w_steps: int, flat: int, left: bool) -> EndReference:
+    """Shape functions at `points` Gauss-Jacobi points (cached, read-only), exponents as in :class:`EndMap`.
+
+    With flat > 1 the last flat - 1 bubbles, whose degree would pass `degree`, are zero.
+    """
     nodes, weights = _rule(points, power)
     vertex = 1 if left else 0
-    bubbles = degree - 1
-    beta = power + steps - 1.0
+    bubbles = degree - 1 if flat == 0 else degree - flat
 
     def shapes(t: Any) -> tuple[Any, Any]:
         values, slopes = np.zeros((2, t.size, degree + 1), dtype=EXTENDED)
-        jacobi, jacobi_slopes = _jacobi(t, bubbles, 2.0, beta)
         values[:, vertex] = 1
-        values[:, 2:] = (1 - t)[:, None] * jacobi
-        slopes[:, 2:] = (1 - t)[:, None] * jacobi_slopes - jacobi
+        inside = slice(2, 2 + bubbles)
+        if flat == 0:
+            jacobi, jacobi_slopes = _jacobi(t, bubbles, 2.0, power + w_steps)
+            values[:, inside] = (1 - t)[:, None] * jacobi
+            slopes[:, inside] = (1 - t)[:, None] * jacobi_slopes - jacobi
+        else:
+            values[:, inside], slopes[:, inside] = _flat_bubbles(t, bubbles, power + 1.0 + flat, flat)
         return values, slopes
 
     values, slopes = shapes(nodes)
@@ -172,3 +193,14 @@ def end_reference(degree: int, points: int, power: float, steps: int, left: bool
     running = side * nodes[:, None] * (scaled @ analysis)
     parts = (nodes, weights, values, side * slopes, at_end[0], to_legendre, running)
     return EndReference(*(part.astype(np.float64) for part in parts))
+
+
+def _flat_bubbles(t: Any, count: int, weight: float, flat: int) -> tuple[Any, Any]:
+    """int_t^1 x^f Q_j dx and its derivative at t, Q_j orthonormal under t^weight."""
+    u, rule = gauss((count + flat) // 2 + 1)
+    u, rule = (1 + u) / 2, rule / 2
+    x = t[:, None] + (1 - t)[:, None] * u
+    table = _jacobi(x.ravel(), count, 0.0, weight)[0].reshape(t.size, u.size, count)
+    values = (1 - t)[:, None] * np.einsum("k,ik,ikj->ij", rule, x**flat, table)
+    slopes = -(t**flat)[:, None] * _jacobi(t, count, 0.0, weight)[0]
+    return values, slopes

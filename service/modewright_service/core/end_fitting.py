@@ -58,8 +58,7 @@ def choose_map(alpha: float, gamma: float, d: float, delta: float, condition: st
     if np.isfinite(delta):
         for trial in range(1, _MOST_STEPS + 1):
             ratio = trial * delta / kappa
-            admitted = s > 0.0 or alpha >= 1.0 or trial * (1.0 - alpha) < 0.999 * kappa
-            if admitted and abs(ratio - round(ratio)) < 1e-9 and round(ratio) >= 1:
+            if abs(ratio - round(ratio)) < 1e-9 and round(ratio) >= 1:
                 b = trial
                 break
     return EndMap(b / kappa, s, alpha, gamma)
@@ -67,7 +66,7 @@ def choose_map(alpha: float, gamma: float, d: float, delta: float, condition: st
 
 @dataclass(frozen=True, eq=False)
 class _Values:
-    """P, R t h^2 and W at points t (n,) (extended), in natural units of p and w."""
+    """P, R and W at points t (n,) (extended), in natural units; with s, R t h^2 in the place of R."""
 
     p: Any
     r: Any
@@ -94,6 +93,8 @@ def _evaluate(
                 up, down = (_real(sources[0], x0 + inward * y * (1 + k * step)) for k in (1, -1))
                 slope = (up - down) / (2 * step)
             r = (q * y**2 - s * (s - 1) * p - s * slope) / scale
+            if not end.s:
+                r /= h**2 * to_precise(point) ** (1 + end.flat)
             rows.append([extended(p / scale), extended(r), extended(w / part**gamma)])
     columns = np.array(rows, dtype=EXTENDED).T
     return _Values(*columns)
@@ -116,11 +117,13 @@ def fit_end(
     end: EndMap,
     widest: float,
     layer: int,
+    energy: float,
     poll: Callable[[], None],
 ) -> CoefficientMesh:
     """A mesh of one element beside the end at x = `place`, at most `widest` long.
 
-    sources: p, q, w of the layer. Raises InvalidProblem where one is undefined, NotConverged where no width
+    sources: p, q, w of the layer. energy: int q u^2 beside which an error of q does not matter, for u of size 1.
+    Raises InvalidProblem where one is undefined, NotConverged where no width
     makes them smooth.
     """
     inward = 1 if left else -1
@@ -130,7 +133,7 @@ def fit_end(
         poll()
         far = place + inward * width
         width = abs(far - place)
-        found = _fitted(sources, place, left, end, width)
+        found = _fitted(sources, place, left, end, width, energy)
         if found is not None:
             p, r, w, errors = found
             edges = np.array([place, far] if left else [far, place])
@@ -152,7 +155,7 @@ def fit_end(
 
 
 def _fitted(
-    sources: list[Source], place: float, left: bool, end: EndMap, width: float
+    sources: list[Source], place: float, left: bool, end: EndMap, width: float, energy: float
 ) -> tuple[FloatArray, FloatArray, FloatArray, tuple[float, float, float]] | None:
     inward = 1 if left else -1
     nodes, project = chebyshev_interpolation(_DEGREE)
@@ -161,8 +164,10 @@ def _fitted(
     if float(values.p.min()) <= 0.0 or float(values.w.min()) <= 0.0:
         return None
     series = [column @ project for column in (values.p, values.r, values.w)]
-    # without s nothing in r goes back to p
-    r_size = float(values.p.min()) if end.s else float(np.abs(values.r).max())
+    # with s, r goes back to p; h m int t^power R v^2 dt is the energy that an error of R makes
+    admitted = energy * (end.power + 1.0) / (2.0 * width * end.m)
+    unit = width**2 if end.s else 1.0
+    r_size = max(float(np.abs(values.r).max()), float(values.p.min()) if end.s else 0.0, admitted * unit)
     floors = (float(values.p.min()), r_size, float(values.w.min()))
     tails = [float(np.abs(c[-3:]).sum()) * lebesgue(_DEGREE) for c in series]
     if any(tail > _TOLERANCE * floor for tail, floor in zip(tails, floors, strict=True)):
@@ -175,14 +180,16 @@ def _fitted(
         tails[k] = max(tails[k], 2 * float(np.abs(table @ series[k] - column).max()))
     if any(tail > _TOLERANCE * floor for tail, floor in zip(tails, floors, strict=True)):
         return None
-    # r / t: what r is at t = 0 is the rounding of s
-    side = -1 if left else 1
-    reduced = np.append(2 * divided_by_distance(series[1], side), EXTENDED(0)) / EXTENDED(width) ** 2
-    # an error of r y^2 that vanishes at the end, in the inequality of bounds._end_term
-    power = end.power
-    growth = min(_DEGREE**2, (1.0 + 1.0 / power) ** 2 if power > 0.0 else np.inf) * tails[1] / width**2
-    largest = float(np.abs(reduced).max())
-    sizes = (floors[0], max(floors[1] / width**2, largest) if end.s else largest, floors[2])
+    reduced, growth = series[1], tails[1]
+    if end.s:
+        # r / t: what r is at t = 0 is the rounding of s
+        divided = 2 * divided_by_distance(reduced, -1 if left else 1) / EXTENDED(width) ** 2
+        reduced = np.append(divided, EXTENDED(0))
+        # an error of r y^2 that vanishes at the end, in the inequality of bounds._end_term
+        power = end.power
+        growth *= min(_DEGREE**2, (1.0 + 1.0 / power) ** 2 if power > 0.0 else np.inf) / width**2
+    r_floor = max(float(np.abs(reduced).max()), floors[0] / unit if end.s else 0.0)
+    sizes = (floors[0], r_floor, floors[2])
     rounded = []
     for c, size in zip((series[0], reduced, series[2]), sizes, strict=True):
         short = c.astype(np.float64)

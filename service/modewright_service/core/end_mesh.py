@@ -279,26 +279,26 @@ def end_samples(mesh: CoefficientMesh, element: int, end: EndMap, z: FloatArray)
     vander = vandermonde(tau, mesh.p.shape[1] - 1)
     p, r, w = vander @ mesh.p[element], vander @ mesh.q[element], vander @ mesh.w[element]
     scale = (2.0 * width / kappa) ** 2
-    return EndSamples(p, scale * z ** (2.0 / b - 2.0) * r, scale * w, width * z ** (2.0 / kappa))
+    return EndSamples(p, scale * z ** (2.0 * (1 + end.flat) / b - 2.0) * r, scale * w, width * z ** (2.0 / kappa))
 
 
 def roomy(mesh: CoefficientMesh) -> CoefficientMesh:
     """The mesh with columns enough for :func:`comparable_weight`."""
-    extra = max((end.steps - 1 for _, end in mesh.end_maps), default=0)
+    extra = max((end.w_steps for _, end in mesh.end_maps), default=0)
     if extra == 0:
         return mesh
     return replace(mesh, **{name: np.pad(getattr(mesh, name), ((0, 0), (0, extra))) for name in ("p", "q", "w")})
 
 
 def comparable_weight(mesh: CoefficientMesh) -> FloatArray:
-    """(E, d+1): w as multiples of it can be added to q: on end elements W t^(b-1), as r is (y/h)^beta R.
+    """(E, d+1): w as multiples of it can be added to q: on end elements W t^(b-1-f), as r is (y/h)^beta R.
 
     The columns must have room (:func:`roomy`).
     """
     weight = mesh.w.copy()
     for element, end in mesh.end_maps:
         series = mesh.w[element].astype(EXTENDED)
-        for _ in range(end.steps - 1):
+        for _ in range(end.w_steps):
             # 2 t = 1 + tau at the left, 1 - tau at the right
             series = times_distance(series, -1 if element == 0 else 1)[:-1] / 2
         weight[element] = series.astype(np.float64)
