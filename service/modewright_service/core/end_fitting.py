@@ -49,13 +49,15 @@ def choose_map(alpha: float, gamma: float, d: float, delta: float, condition: st
 
     condition: "principal", "dirichlet" or "neumann". delta: inf where the coefficients are pure powers.
     v is then a series in y^kappa and y^delta, kappa = 2 + gamma - alpha; m = b / kappa makes both whole powers
-    of t where some b <= 8 does, else y^kappa alone.
+    of t where some b <= 8 does, else y^kappa alone, y^delta being at least t.
     """
     kappa = 2.0 + gamma - alpha
     # (1 - alpha + D) / 2; a natural end of a regular problem takes the other exponent, 0
     s = 0.0 if condition == "neumann" else 0.5 * (1.0 - alpha + d)
     b = 1
     if np.isfinite(delta):
+        # r then stays bounded beside its power
+        b = min(int(np.ceil(kappa / delta - 1e-9)), _MOST_STEPS)
         for trial in range(1, _MOST_STEPS + 1):
             ratio = trial * delta / kappa
             if abs(ratio - round(ratio)) < 1e-9 and round(ratio) >= 1:
