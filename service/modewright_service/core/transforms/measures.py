@@ -7,14 +7,21 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from modewright.pieces import Pieces, legendre_vandermonde
+from modewright.end_pieces import end_pieces
 from modewright.record import Record
+from modewright.series import legendre_vandermonde
+from modewright_service.core.errors import InvalidRequest, Reason
+from modewright_service.core.quadrature import gauss_legendre
 
 from .meshes import Measure
 
 __all__ = ["Coordinate", "coordinate"]
 
 Floats = NDArray[np.float64]
+
+# Degree up to which w is looked for as a polynomial in x beside a singular end.
+_DEGREE = 24
+_ROUNDING = 1e-14
 
 
 class Coordinate(Protocol):
@@ -47,8 +54,8 @@ class _Weight:
     """xi = int w dx, from the polynomials of w that the modes were computed with."""
 
     def __init__(self, record: Record) -> None:
-        self._pieces = Pieces(record)
-        w = record.w
+        self._edges = record.edges
+        w = _plain_weight(record)
         half = np.diff(record.edges)[:, np.newaxis] / 2.0
         # int_{-1}^t P_0 = P_1 + P_0 and int_{-1}^t P_k = (P_{k+1} - P_{k-1})/(2k+1) (NIST DLMF 18.9.7).
         series = np.zeros((w.shape[0], w.shape[1] + 1))
@@ -62,12 +69,42 @@ class _Weight:
         self.degree = w.shape[1]
 
     def _at(self, x: Floats) -> Floats:
-        element, t = self._pieces.locate(x)
+        edges = self._edges
+        element = np.clip(np.searchsorted(edges, x, side="right") - 1, 0, edges.size - 2)
+        left, right = edges[element], edges[element + 1]
+        t = ((x - left) - (right - x)) / (right - left)
         table = legendre_vandermonde(t, self.degree)
         return np.asarray(np.einsum("xk,kx->x", self._series[element], table))
 
     def difference(self, low: Floats, high: Floats) -> Floats:
         return self._at(high) - self._at(low)
+
+
+def _plain_weight(record: Record) -> Floats:
+    """(E, d+1): Legendre coefficients of w in x on every element, those beside singular ends included.
+
+    Raises InvalidRequest where w is no polynomial in x there: xi would be none.
+    """
+    pieces = end_pieces(record)
+    if not pieces:
+        return record.w
+    columns = max(record.w.shape[1], _DEGREE + 1)
+    w = np.zeros((record.elements, columns))
+    w[:, : record.w.shape[1]] = record.w
+    nodes, weights = gauss_legendre(columns)
+    for piece in pieces:
+        half = piece.width / 2.0
+        # from the end inwards, so that nothing cancels beside it
+        y = half * (1.0 + nodes) if piece.left else half * (1.0 - nodes)
+        values = piece.coefficient("w", (y / piece.width) ** (1.0 / piece.m))
+        table = legendre_vandermonde(nodes, columns - 1)
+        series = (table @ (values * weights)) * (np.arange(columns) + 0.5)
+        if not np.abs(series[-3:]).max() <= _ROUNDING * np.abs(series).max():
+            message = f"w is no polynomial beside x = {piece.place!r}: averages in w dx have no interpolant there"
+            raise InvalidRequest.at(Reason.BAD_VALUES, "measure", message, "weight", x=piece.place)
+        w[piece.element] = np.where(np.abs(series) > _ROUNDING * np.abs(series).max(), series, 0.0)
+    used = 1 + int(np.flatnonzero(w.any(axis=0)).max(initial=0))
+    return w[:, :used]
 
 
 def coordinate(measure: Measure, record: Record | None = None) -> Coordinate:
