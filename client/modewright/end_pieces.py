@@ -4,8 +4,8 @@ With y the distance from the end, h the element's width and xi = (y/h)^(1/m) (se
 
     u = xi^(m s) v,    du/dy = xi^(m (s-1)) / h (s v + xi v_xi / m),    p = xi^(m alpha) P.
 
-At the end itself the powers say whether a value is zero, finite or infinite. The coordinate of a point is xi, in
-[0, 1], at both ends.
+At the end itself the powers say whether a value is zero, finite or infinite. The coordinate of a point is
+xi, in [0, 1], at both ends.
 """
 
 from __future__ import annotations
@@ -29,7 +29,8 @@ _ZERO = 1e-12
 
 @dataclass(frozen=True, eq=False)
 class EndPiece:
-    """One end element. element: its index; left: at which end; place: the end's x; width: h; the rest: exponents.
+    """One end element. element: its index; left: at which end; place: the end's x; width: h; the rest:
+    exponents.
 
     centre: the power of x that a flux density is divided by and that vanishes at this end, else 0.
     p, q, w: (d+1,) series of P, Q and W.
@@ -60,7 +61,7 @@ class EndPiece:
 
     @property
     def flat(self) -> int:
-        """The order to which v_xi vanishes at a natural end of a regular problem, where p has infinite 1/p."""
+        """The order to which v_xi vanishes at a natural end of a regular problem."""
         return int(np.floor(self.m * (1.0 - self.alpha) + 1e-9)) if self.s == 0.0 and self.alpha < 1.0 else 0
 
     def _slope(self, series: NDArray[Any], xi: Floats, divided: int = 0) -> NDArray[Any]:
@@ -83,7 +84,7 @@ class EndPiece:
         """(M, P): u', p u' or -(p u')/x^g along +x, from the series (M, k+1) of v."""
         slope = self._slope(series, xi, self.flat) / self.m
         power = self.s - 1.0
-        factor = (1.0 if self.left else -1.0) / self.width
+        factor = np.full(xi.shape, (1.0 if self.left else -1.0) / self.width)
         if quantity != "derivative":
             factor = factor * (legendre_vandermonde(self._t(xi), self.p.size - 1).T @ self.p)
             power += self.alpha
@@ -106,7 +107,9 @@ class EndPiece:
         if s == 0.0:
             return result
         # s(s-1) p/y^2 + s p'/y
-        barrier = s * (s - 1.0 + self.alpha) * self._sum(self.p, xi) + s / self.m * xi * self._slope(self.p, xi)
+        barrier = s * (s - 1.0 + self.alpha) * self._sum(self.p, xi) + s / self.m * xi * self._slope(
+            self.p, xi
+        )
         if np.abs(barrier).max(initial=0.0) <= _ZERO * float(np.abs(self.p).sum()):
             return result
         with np.errstate(invalid="ignore"):

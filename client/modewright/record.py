@@ -123,10 +123,10 @@ class Record:
         resistance is 0); shape (0,) where that end has no lump.
     joints: (J, 4): x, resistance, spring, mass of each interface, geometry included.
     left_map, right_map: (5,) where the outermost element there lies beside a singular end, else (0,): m, s,
-        alpha, beta, gamma. With y the distance from the end, h the element's width and xi = (y/h)^(1/m), the
-        modes there are xi^(m s) times their series, in t = 2 xi - 1 at the left and 1 - 2 xi at the right; p and
-        w are (y/h)^alpha and (y/h)^gamma times theirs, and q = (y/h)^beta Q + s(s-1) p/y^2 + s (dp/dy)/y, Q
-        the series of q.
+        alpha, beta, gamma. With y the distance from the end, h the element's width and xi = (y/h)^(1/m),
+        the modes there are xi^(m s) times their series, in t = 2 xi - 1 at the left and 1 - 2 xi at the
+        right; p and w are (y/h)^alpha and (y/h)^gamma times theirs, and q = (y/h)^beta Q + s(s-1) p/y^2 + s
+        (dp/dy)/y, Q the series of q.
     first_index: index of the first mode.
     solve_seconds: how long the solve took; not part of the bytes.
 

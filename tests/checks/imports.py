@@ -1,7 +1,8 @@
 """Import rules between the rooms, read from the source with `ast`.
 
     rpc -> store -> core;  process -> all of these
-    service -> modewright.v1, modewright.record, modewright.pieces and nothing else of the client
+    service -> modewright.v1, modewright.record, modewright.pieces (and what these two are made of:
+    end_pieces, series) and nothing else of the client
     core, record and pieces import neither grpc nor protobuf; grpc is imported in rpc and process only
     client -> no service code; at import time NumPy, grpc and protobuf only
 
@@ -19,7 +20,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 SERVICE = "modewright_service"
-RECORD = ("modewright.record", "modewright.pieces")
+RECORD = ("modewright.record", "modewright.pieces", "modewright.end_pieces", "modewright.series")
 CONTRACT = "modewright.v1"
 
 
@@ -37,12 +38,12 @@ class Rule:
 RULES = (
     Rule("modewright.v1", ("grpc", "google.protobuf", CONTRACT)),
     Rule("modewright.record", ("numpy", *RECORD)),
-    Rule("modewright.pieces", ("numpy", *RECORD)),
+    *(Rule(name, ("numpy", *RECORD)) for name in RECORD[1:]),
     Rule("modewright.demo", ("numpy", "modewright"), deferred=("matplotlib",)),
     Rule("modewright.cli", ("numpy", "modewright"), deferred=("matplotlib",)),
     Rule("modewright.document", ("numpy", "google", "modewright"), deferred=("yaml",)),
     Rule("modewright", ("numpy", "grpc", "google", "modewright")),
-    Rule(f"{SERVICE}.core", ("numpy", "scipy", f"{SERVICE}.core", *RECORD)),
+    Rule(f"{SERVICE}.core", ("numpy", "scipy", "mpmath", f"{SERVICE}.core", *RECORD)),
     Rule(f"{SERVICE}.store", ("numpy", f"{SERVICE}.core", f"{SERVICE}.store", *RECORD)),
     Rule(
         f"{SERVICE}.rpc",

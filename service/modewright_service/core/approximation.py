@@ -176,7 +176,9 @@ def _outer_elements(
                 inside += [float(knot) for knot in source.table.knots if left < knot < right]
             else:
                 just_inside = _JUST_INSIDE * span
-                first, last = (near[0] + just_inside, near[1]) if at_left else (near[0], near[1] - just_inside)
+                first, last = (
+                    (near[0] + just_inside, near[1]) if at_left else (near[0], near[1] - just_inside)
+                )
                 inside += find_cuts(source.program, None, first, last, source.signed).points
         widest = min([_END_SHARE * span, *(0.5 * abs(x - place) for x in inside)])
         found.append(fit_end(sources, place, at_left, end, widest, index, scales[index] * span, poll))

@@ -106,8 +106,8 @@ def coefficient_terms(mesh: CoefficientMesh, lam: Array) -> Array:
 
 
 def _end_depth(mesh: CoefficientMesh, part: Ranges, element: int, end: EndMap) -> float:
-    """max(-r / w) on an end element; where r is more singular than w, beyond the distance within which half of
-    the p-energy outweighs it (the inequality of :func:`_end_term`).
+    """max(-r / w) on an end element; where r is more singular than w, beyond the distance within which half
+    of the p-energy outweighs it (the inequality of :func:`_end_term`).
     """
     below = -float(part.q_lower[element])
     if below <= 0.0:
@@ -232,7 +232,7 @@ def _varying_ends(mesh: CoefficientMesh) -> list[int]:
 
 
 def _graded(mesh: CoefficientMesh, pieces: int) -> CoefficientMesh:
-    """The mesh with end elements cut down, their constants' share of the error like that of `pieces` others."""
+    """The mesh with end elements cut down: their constants' share of the error like that of the others."""
     return graded(mesh, _varying_ends(mesh), min(1.0, 4.0 / pieces))
 
 

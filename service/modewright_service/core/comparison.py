@@ -42,8 +42,8 @@ class Comparison:
 
     length, p, q: (P,). w_lower, w_upper: (P,), used for nu < 0 and nu >= 0. resistance, spring, mass: (P,)
     point terms at the right end of each piece (the mass and spring before the resistance). left, right: the
-    ends. factor: u(b) / u(a) where they are coupled. left_piece, right_piece: what stands for the end elements,
-    whose places among the pieces are left out.
+    ends. factor: u(b) / u(a) where they are coupled. left_piece, right_piece: what stands for the end
+    elements, whose places among the pieces are left out.
     """
 
     length: Array
@@ -88,12 +88,20 @@ def build_comparison(mesh: CoefficientMesh, resolved: Resolved, cuts: IntArray) 
         # what hangs on the inner node of the left end element comes after it
         ends[0] = replace(ends[0], spring=ends[0].spring + spring[0])
     inside = slice(0 if ends[0] is None else 1, length.size - (0 if ends[1] is None else 1))
-    arrays = (length, bounds.p_lower, bounds.q_lower, bounds.w_lower, bounds.w_upper, resistance, spring, mass)
     return Comparison(
-        *(array[inside] for array in arrays),
-        *(resolved.left, resolved.right),
+        length[inside],
+        bounds.p_lower[inside],
+        bounds.q_lower[inside],
+        bounds.w_lower[inside],
+        bounds.w_upper[inside],
+        resistance[inside],
+        spring[inside],
+        mass[inside],
+        resolved.left,
+        resolved.right,
         resolved.factor,
-        *ends,
+        ends[0],
+        ends[1],
     )
 
 

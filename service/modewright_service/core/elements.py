@@ -93,8 +93,8 @@ class Elements:
     mesh: the coefficients they come from. reference: the shape functions.
     ends: (element, shape functions) of the end elements (:mod:`.end_elements`).
     p, q, w: (E, G) coefficient values at the Gauss points; half: (E,) half lengths; weights: (E, G) of the
-        quadrature in x. On end elements the coefficients of v_t^2, v^2, v^2 in the weight t^(m D), the weights
-        those of Gauss-Jacobi, half = 1.
+        quadrature in x. On end elements the coefficients of v_t^2, v^2, v^2 in the weight t^(m D), the
+        weights those of Gauss-Jacobi, half = 1.
     shift: (E,) s. theta: (E, J) descending masses of the bubble modes; modes: (E, J, J), columns v_j in
         bubbles.
     kappa: (E, J, 2) C(v_j, N_v); mass: (E, J, 2) m_j = M(v_j, psi_v).
@@ -124,14 +124,14 @@ class Elements:
 
     def values_of(self, shapes: Field) -> Field:
         """(E, T, G): u (on end elements v) at the quadrature points, from shapes (E, T, k+1)."""
-        result = np.matmul(shapes, self.reference.values.T)
+        result: Field = np.matmul(shapes, self.reference.values.T)
         for element, own in self.ends:
             result[element] = shapes[element] @ own.values.T
         return result
 
     def fluxes_of(self, shapes: Field) -> Field:
         """(E, T, G): p u' at the quadrature points (on end elements that of v, t^(m D) divided out)."""
-        result = np.matmul(shapes, self.reference.slopes.T)
+        result: Field = np.matmul(shapes, self.reference.slopes.T)
         for element, own in self.ends:
             result[element] = shapes[element] @ own.slopes.T
         result *= (self.p / self.half[:, None])[:, None, :]
@@ -209,7 +209,9 @@ def build_elements(mesh: CoefficientMesh, degree: int) -> Elements:
     rows = one_vertices - np.einsum("ejv,ej->ev", kappa, one_bubbles)
     cross = kappa_t @ (modes_t @ masses[:, 2:, :2])
     mass_c = masses[:, :2, :2] - cross - np.swapaxes(cross, 1, 2) + kappa_t @ (theta[:, :, None] * kappa)
-    return Elements(mesh, ref, ends, half, weights, p, q, w, shift, theta, modes, kappa, mass, g, rows, mass_c)
+    return Elements(
+        mesh, ref, ends, half, weights, p, q, w, shift, theta, modes, kappa, mass, g, rows, mass_c
+    )
 
 
 def _ends(

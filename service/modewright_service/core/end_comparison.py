@@ -2,14 +2,14 @@
 
 With P >= P-, R >= R-, W <= W+ the transformed form of :mod:`.end_elements` is bounded from below by
 
-    int c t^(1+b) v_t^2 dt + int (Q - nu W) t^b v^2 dt + S v(1)^2,   b = m D, c = P-/(h m), Q = h m R-, W = h m W+
+    int c t^(1+b) v_t^2 dt + int (Q - nu W) t^b v^2 dt + S v(1)^2,
 
-(t^(k-1) <= 1 where w has a further factor; at a flat end the load has t^f more, and x = t^(1+f) in the place of t
-makes the same of it, b then m D / (1 + f)). Its solution that is regular at 0 is the hypergeometric function
-0F1(b + 1; l t), l = (Q - nu W) / c: a Bessel function. With d_n = 1 + l / (n (n + 1) d_{n+1}), the pivots of the
-symmetric tridiagonal matrix whose eigenvalues are the reciprocal zeros (Y. Ikebe, Math. Comp. 29, 1975,
-878-879), its logarithmic derivative at 1 is l / ((b + 1) d_{b+1}) and the negative pivots count its zeros in
-(0, 1).
+b = m D, c = P- / (h m), Q = h m R-, W = h m W+ (t^(k-1) <= 1 where w has a further factor; at a flat end
+the load has t^f more, and x = t^(1+f) in the place of t makes the same of it, b then m D / (1 + f)). Its
+solution that is regular at 0 is the hypergeometric function 0F1(b + 1; l t), l = (Q - nu W) / c: a Bessel
+function. With d_n = 1 + l / (n (n + 1) d_{n+1}), the pivots of the symmetric tridiagonal matrix whose
+eigenvalues are the reciprocal zeros (Y. Ikebe, Math. Comp. 29, 1975, 878-887, quoted from memory), its
+logarithmic derivative at 1 is l / ((b + 1) d_{b+1}) and the negative pivots count its zeros in (0, 1).
 """
 
 from __future__ import annotations
@@ -36,7 +36,9 @@ _EPS = float(np.finfo(float).eps)
 
 @dataclass(frozen=True)
 class EndPiece:
-    """power: b. stretch: 1 + f. p: c times stretch^2. q: Q. w_lower, w_upper: W for nu < 0 and nu >= 0. spring: S."""
+    """power: b. stretch: 1 + f. p: c times stretch^2. q: Q. w_lower, w_upper: W for nu < 0 and nu >= 0.
+    spring: S.
+    """
 
     power: float
     stretch: float
@@ -47,7 +49,10 @@ class EndPiece:
     spring: float
 
     def stiffness(self, nu: Array, fraction: float) -> tuple[Array, IntArray]:
-        """(T,) flux over value at the inner node, seen from the end, and (T,) zeros inside; c times fraction."""
+        """(T,) flux over value at the inner node, from the end's side, and (T,) zeros inside.
+
+        fraction multiplies c.
+        """
         ratio = (self.q - nu * np.where(nu < 0.0, self.w_lower, self.w_upper)) / (fraction * self.p)
         first = self.power + 1.0
         count = np.zeros(nu.size, dtype=np.int64)

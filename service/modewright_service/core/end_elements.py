@@ -16,10 +16,10 @@ natural for v: it carries no unknown of its own. Basis: 1 (the inner node's func
 P_j^(2, beta)(2t - 1), beta = m D + b - 1, orthogonal under the weight of the mass: with Legendre polynomials
 instead, high exponents lose all digits.
 
-At a natural end of a regular problem, s = 0 and D = alpha - 1 < 0, so that polynomials have no finite energy where
-m D <= -1. There v_t vanishes like t^f, f = floor(-m D): the common weight is t^(m D + f), the factors above are
-divided by t^f, r = (y/h)^(alpha - 2 + (1 + f)/m) R, and the basis is 1 and int_t^1 x^f Q_j dx with polynomials Q_j
-orthogonal under the weight of the energy.
+At a natural end of a regular problem, s = 0 and D = alpha - 1 < 0, so that polynomials have no finite
+energy where m D <= -1. There v_t vanishes like t^f, f = floor(-m D): the common weight is t^(m D + f), the
+factors above are divided by t^f, r = (y/h)^(alpha - 2 + (1 + f)/m) R, and the basis is 1 and int_t^1 x^f
+Q_j dx with polynomials Q_j orthogonal under the weight of the energy.
 """
 
 from __future__ import annotations
@@ -97,8 +97,8 @@ def _recurrence(count: int, a: Any, b: Any) -> tuple[Any, Any]:
 
 def _first(a: float, b: float) -> Any:
     """1 / sqrt(int (1-t)^a t^b dt), a = 0 or 2 (Euler's beta integral)."""
-    b = EXTENDED(b)
-    return np.sqrt(b + 1) if a == 0.0 else np.sqrt((b + 1) * (b + 2) * (b + 3) / 2)
+    c = EXTENDED(b)
+    return np.sqrt(c + 1) if a == 0.0 else np.sqrt((c + 1) * (c + 2) * (c + 3) / 2)
 
 
 def _jacobi(t: Any, count: int, a: float, b: float) -> tuple[Any, Any]:
@@ -159,7 +159,9 @@ class EndReference:
 
 
 @lru_cache(maxsize=64)
-def end_reference(degree: int, points: int, power: float, w_steps: int, flat: int, left: bool) -> EndReference:
+def end_reference(
+    degree: int, points: int, power: float, w_steps: int, flat: int, left: bool
+) -> EndReference:
     """Shape functions at `points` Gauss-Jacobi points (cached, read-only), exponents as in :class:`EndMap`.
 
     With flat > 1 the last flat - 1 bubbles, whose degree would pass `degree`, are zero.

@@ -1,10 +1,10 @@
 """The factored coefficients of an end element: P, R and W as polynomials in t.
 
 p, q and w are evaluated beside the end to many digits (:mod:`.precise`), their powers divided out, and
-interpolated at Chebyshev points in t. r = q - s(s-1) p/y^2 - s p'/y is formed there before anything is rounded:
-its terms cancel to the order of the first correction of the coefficients. The truncation is estimated from the
-last coefficients and checked at other points; this near a singularity no bound by enclosures is to be had.
-The width is taken as large as the polynomials allow.
+interpolated at Chebyshev points in t. r = q - s(s-1) p/y^2 - s p'/y is formed there before anything is
+rounded: its terms cancel to the order of the first correction of the coefficients. The truncation is
+estimated from the last coefficients and checked at other points; this near a singularity no bound by
+enclosures is to be had. The width is taken as large as the polynomials allow.
 """
 
 from __future__ import annotations
@@ -47,9 +47,9 @@ _MOST_STEPS = 8
 def choose_map(alpha: float, gamma: float, d: float, delta: float, condition: str) -> EndMap:
     """Exponents of the end element for p ~ y^alpha, w ~ y^gamma, D = d and coefficients in powers of y^delta.
 
-    condition: "principal", "dirichlet" or "neumann". delta: inf where the coefficients are pure powers.
-    v is then a series in y^kappa and y^delta, kappa = 2 + gamma - alpha; m = b / kappa makes both whole powers
-    of t where some b <= 8 does, else y^kappa alone, y^delta being at least t.
+    condition: "principal", "dirichlet" or "neumann". delta: inf where the coefficients are pure powers. v
+    is then a series in y^kappa and y^delta, kappa = 2 + gamma - alpha; m = b / kappa makes both whole
+    powers of t where some b <= 8 does, else y^kappa alone, y^delta being at least t.
     """
     kappa = 2.0 + gamma - alpha
     # (1 - alpha + D) / 2; a natural end of a regular problem takes the other exponent, 0
@@ -75,16 +75,16 @@ class _Values:
     w: Any
 
 
-def _evaluate(
-    sources: list[Source], place: float, inward: int, end: EndMap, width: float, t: Any
-) -> _Values:
+def _evaluate(sources: list[Source], place: float, inward: int, end: EndMap, width: float, t: Any) -> _Values:
     """The factored coefficients at points t, y = h t^m, x = place + inward y."""
     smallest = float(t.min()) ** end.m * width
     lost = max(0.0, np.log10(max(abs(place), 1e-300) / smallest)) if place else 0.0
     rows: list[list[Any]] = []
     with mpmath.workdps(int(_DIGITS + _STEP_DIGITS + lost)):
         step = mpmath.mpf(10) ** -_STEP_DIGITS
-        s, alpha, gamma, m, h, x0 = (mpmath.mpf(v) for v in (end.s, end.alpha, end.gamma, end.m, width, place))
+        s, alpha, gamma, m, h, x0 = (
+            mpmath.mpf(v) for v in (end.s, end.alpha, end.gamma, end.m, width, place)
+        )
         for point in t:
             part = to_precise(point) ** m
             y = h * part
@@ -124,9 +124,8 @@ def fit_end(
 ) -> CoefficientMesh:
     """A mesh of one element beside the end at x = `place`, at most `widest` long.
 
-    sources: p, q, w of the layer. energy: int q u^2 beside which an error of q does not matter, for u of size 1.
-    Raises InvalidProblem where one is undefined, NotConverged where no width
-    makes them smooth.
+    sources: p, q, w of the layer. energy: int q u^2 beside which an error of q does not matter, for u of
+    size 1. Raises InvalidProblem where one is undefined, NotConverged where no width makes them smooth.
     """
     inward = 1 if left else -1
     width = widest
@@ -204,7 +203,9 @@ def _fitted(
     lower = [float(positive_floor(c[None])[0]) for c in (p, w)]
     if min(lower) <= 0.0:
         return None
-    rounding = [2 * UNIT * float(np.abs(c).sum()) + _DROPPED * size for c, size in zip(rounded, sizes, strict=True)]
+    rounding = [
+        2 * UNIT * float(np.abs(c).sum()) + _DROPPED * size for c, size in zip(rounded, sizes, strict=True)
+    ]
     errors = (
         (tails[0] + rounding[0]) / lower[0],
         growth + rounding[1],

@@ -46,7 +46,7 @@ _SMALLEST_RATIO = 1.05
 
 
 def factored_values(
-    end: EndMap, width: float, series: tuple[Any, Any, Any], y: Any, left: bool
+    end: EndMap, width: Any, series: tuple[Any, Any, Any], y: Any, left: bool
 ) -> tuple[Any, Any, Any]:
     """p, q, w at distances y in (0, width] from the end, in the precision of y.
 
@@ -108,12 +108,11 @@ def _fit(
     barrier = abs(end.s * (end.s - 1 + end.alpha)) + abs(end.s / end.m)
     q_error = float(mesh.q_error[element]) * steep + change[1]
     q_error += float(mesh.p_error[element]) * barrier * float(np.abs(values[0] / y**2).max())
-    return _Part(near, far, *rounded, p_error, q_error, w_error), good
+    p, q, w = rounded
+    return _Part(near, far, p, q, w, p_error, q_error, w_error), good
 
 
-def _parts(
-    mesh: CoefficientMesh, element: int, end: EndMap, cuts: list[float], left: bool
-) -> list[_Part]:
+def _parts(mesh: CoefficientMesh, element: int, end: EndMap, cuts: list[float], left: bool) -> list[_Part]:
     """Plain parts between ascending distances `cuts`, cut further where a polynomial does not converge."""
     found = []
     pending = list(zip(cuts[:-1], cuts[1:], strict=True))
@@ -148,9 +147,7 @@ def _inner(mesh: CoefficientMesh, element: int, end: EndMap, y: float, left: boo
     for name, exponent in (("p", end.alpha), ("q", end.q_exponent), ("w", end.gamma)):
         series = reexpanded(getattr(mesh, name)[one], shift, np.array([c])) * ratio ** EXTENDED(exponent)
         getattr(result, name)[element] = series[0].astype(np.float64)
-    rounding = {
-        name: 2 * UNIT * np.abs(getattr(result, name)[one]).sum(axis=1) for name in ("p", "q", "w")
-    }
+    rounding = {name: 2 * UNIT * np.abs(getattr(result, name)[one]).sum(axis=1) for name in ("p", "q", "w")}
     result.p_error[one] += rounding["p"] / positive_floor(result.p[one])
     result.w_error[one] += rounding["w"] / positive_floor(result.w[one])
     result.q_error[one] = mesh.q_error[one] * float(ratio**end.q_exponent) + rounding["q"]
@@ -209,7 +206,8 @@ def _cut(mesh: CoefficientMesh, element: int, end: EndMap, cuts: list[float], le
 
 
 def restrict(mesh: CoefficientMesh, edges: FloatArray) -> CoefficientMesh:
-    """The same polynomials on a finer mesh whose ``edges`` contain the old ones (:func:`.coefficients.restrict`).
+    """The same polynomials on a finer mesh whose ``edges`` contain the old ones
+    (:func:`.coefficients.restrict`).
 
     Edges within an end element cut it (:func:`cut_ends`); the result may then have a few more.
     """
@@ -257,7 +255,8 @@ def with_ends(
 
 @dataclass(frozen=True, eq=False)
 class EndSamples:
-    """P, R, W of an end element at points z in (0, 1), with y = h z^(2 / kappa) and what makes phases of them.
+    """P, R, W of an end element at points z in (0, 1), with y = h z^(2 / kappa) and what makes phases of
+    them.
 
     sqrt((lambda w - r) / p) dy = sqrt((lambda w - q) / p) dz with the numbers p, q, w (n,) given here.
     y: (n,) distances, in the order of z.
@@ -279,7 +278,9 @@ def end_samples(mesh: CoefficientMesh, element: int, end: EndMap, z: FloatArray)
     vander = vandermonde(tau, mesh.p.shape[1] - 1)
     p, r, w = vander @ mesh.p[element], vander @ mesh.q[element], vander @ mesh.w[element]
     scale = (2.0 * width / kappa) ** 2
-    return EndSamples(p, scale * z ** (2.0 * (1 + end.flat) / b - 2.0) * r, scale * w, width * z ** (2.0 / kappa))
+    return EndSamples(
+        p, scale * z ** (2.0 * (1 + end.flat) / b - 2.0) * r, scale * w, width * z ** (2.0 / kappa)
+    )
 
 
 def roomy(mesh: CoefficientMesh) -> CoefficientMesh:
@@ -287,7 +288,8 @@ def roomy(mesh: CoefficientMesh) -> CoefficientMesh:
     extra = max((end.w_steps for _, end in mesh.end_maps), default=0)
     if extra == 0:
         return mesh
-    return replace(mesh, **{name: np.pad(getattr(mesh, name), ((0, 0), (0, extra))) for name in ("p", "q", "w")})
+    p, q, w = (np.pad(c, ((0, 0), (0, extra))) for c in (mesh.p, mesh.q, mesh.w))
+    return replace(mesh, p=p, q=q, w=w)
 
 
 def comparable_weight(mesh: CoefficientMesh) -> FloatArray:

@@ -1,9 +1,9 @@
 """Quadrature beside a singular end, where weight and modes are powers of the distance y times series.
 
 Squares and products of fields and modes hold y^gamma times 1, y^s and y^(2 s), times series in y and in
-y^(1/m). Where s and 1/m are whole numbers, one Gauss-Jacobi rule with the weight y^gamma is exact on the part
-that touches the end. Elsewhere parts are graded towards the end, Gauss-Legendre on each and Gauss-Jacobi on the
-last, which is so short that its integral is rounding whatever the powers.
+y^(1/m). Where s and 1/m are whole numbers, one Gauss-Jacobi rule with the weight y^gamma is exact on the
+part that touches the end. Elsewhere parts are graded towards the end, Gauss-Legendre on each and
+Gauss-Jacobi on the last, which is so short that its integral is rounding whatever the powers.
 """
 
 from __future__ import annotations
@@ -71,7 +71,9 @@ def end_nodes(piece: EndPiece, breaks: Floats, degree: int, field_degree: int) -
     held = np.repeat(np.array(low) == 0.0, counts)
     xi = (y / piece.width) ** (1.0 / piece.m)
     table = np.polynomial.legendre.legval(2.0 * xi - 1.0 if piece.left else 1.0 - 2.0 * xi, piece.w)
-    weight = weight * table * np.where(held, 1.0, (y / piece.width) ** piece.gamma)
+    weight = (
+        weight * np.asarray(table, dtype=np.float64) * np.where(held, 1.0, (y / piece.width) ** piece.gamma)
+    )
     x = piece.place + y if piece.left else piece.place - y
     order = np.argsort(y if piece.left else -y, kind="stable")
     index = np.repeat(np.array(part, dtype=np.intp), counts)
@@ -98,7 +100,7 @@ def _graded(piece: EndPiece, near: float, far: float, whole: bool) -> list[float
         if whole:
             return [0.0, far]
         # the first power that is not whole, and how small the rest of its integral must become
-        power = piece.gamma + 1.0 + min(2.0 * max(piece.s, 0.0) if piece.s else 1.0 / piece.m, 1.0 / piece.m, 1.0)
+        power = piece.gamma + 1.0 + min(2.0 * piece.s if piece.s > 0.0 else 1.0, 1.0 / piece.m, 1.0)
         steps = min(int(np.ceil(-np.log(_ROUNDING) / (power * np.log(_RATIO)))), _MOST_PARTS)
         return [0.0, *(far * _RATIO ** np.arange(-steps, 1.0)).tolist()]
     steps = max(1, int(np.ceil(np.log(far / near) / np.log(_RATIO))))

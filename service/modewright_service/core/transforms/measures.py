@@ -100,7 +100,7 @@ def _plain_weight(record: Record) -> Floats:
         table = legendre_vandermonde(nodes, columns - 1)
         series = (table @ (values * weights)) * (np.arange(columns) + 0.5)
         if not np.abs(series[-3:]).max() <= _ROUNDING * np.abs(series).max():
-            message = f"w is no polynomial beside x = {piece.place!r}: averages in w dx have no interpolant there"
+            message = f"w is no polynomial beside x = {piece.place!r}: averages in w dx cannot be taken apart"
             raise InvalidRequest.at(Reason.BAD_VALUES, "measure", message, "weight", x=piece.place)
         w[piece.element] = np.where(np.abs(series) > _ROUNDING * np.abs(series).max(), series, 0.0)
     used = 1 + int(np.flatnonzero(w.any(axis=0)).max(initial=0))
