@@ -32,7 +32,6 @@ from .description import (
     Robin,
     Samples,
 )
-from .errors import Reason, Unsupported
 from .validation import layer_edges, snapped_interface, validate
 
 __all__ = [
@@ -120,13 +119,8 @@ def _end_term(end: End, side: str, factor: float) -> EndTerm:
             return EndTerm(lump=(mass * factor, film * factor, resistance / factor), kind="lump")
         case Lump(mass, film):
             return EndTerm(stiffness=film * factor, mass=mass * factor, kind="lump")
-        case _:
-            raise Unsupported.at(
-                Reason.UNSUPPORTED_END,
-                side,
-                "the principal solution at a singular end is not handled by this version",
-                "bounded",
-            )
+        case Bounded():
+            return EndTerm(kind="bounded")
 
 
 def _factor(coupling: Coupling | None) -> complex | None:
@@ -148,8 +142,6 @@ def resolve(problem: Problem) -> Resolved:
 
     Films, masses and springs are multiplied by r^g, resistances divided by it; a Robin condition
     alpha u + beta p u' = 0 in the material's p becomes alpha r^g u + beta (p r^g) u' = 0.
-
-    Raises :class:`Unsupported` for the bounded end.
     """
     edges = layer_edges(problem)
     power = problem.geometry.power

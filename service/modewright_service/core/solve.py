@@ -25,6 +25,7 @@ from modewright_service.core.digest import ALGORITHM_VERSION, problem_digest, se
 from modewright_service.core.elements import build_elements
 from modewright_service.core.end_elements import EndMap
 from modewright_service.core.end_mesh import comparable_weight, roomy
+from modewright_service.core.end_plan import EndPlan, plan_ends
 from modewright_service.core.errors import (
     CoreError,
     InvalidProblem,
@@ -124,7 +125,8 @@ def solve(
     check_selection(wish)
     validate(problem)
     resolved = resolve(problem)
-    coefficients = approximate(problem, poll=poll)
+    plans = plan_ends(problem)
+    coefficients = approximate(problem, ends=(plans[0].map, plans[1].map), poll=poll)
     if not coefficients.w.any():
         raise SpectrumExhausted.at(
             Reason.SPECTRUM_EXHAUSTED,
@@ -147,7 +149,7 @@ def solve(
             "too large to be solved with, or negative where w is zero: no lowest eigenvalue was found",
             float(coefficients.q[largest, 0]),
         ) from error
-    record = _record(problem, resolved, result, wish, rtol, scale, time.perf_counter() - started)
+    record = _record(problem, resolved, plans, result, wish, rtol, scale, time.perf_counter() - started)
     return record if shift == 0.0 else _moved_back(record, shift, coefficients)
 
 
@@ -415,6 +417,7 @@ def _marked(result: _Pass, rtol: float, scale: float) -> NDArray[np.bool_]:
 def _record(
     problem: Problem,
     resolved: Resolved,
+    plans: tuple[EndPlan, EndPlan],
     result: _Pass,
     wish: Selection,
     rtol: float,
@@ -449,8 +452,8 @@ def _record(
         p=mesh.p,
         q=mesh.q,
         w=mesh.w,
-        left=_end_info(resolved.left),
-        right=_end_info(resolved.right),
+        left=_end_info(resolved.left, plans[0]),
+        right=_end_info(resolved.right, plans[1]),
         left_lump=modes.nodes[0, :count] if _has_lump(resolved.left) else none,
         right_lump=modes.nodes[-1, :count] if _has_lump(resolved.right) else none,
         joints=np.array(
@@ -472,7 +475,7 @@ def _has_lump(end: EndTerm) -> bool:
     return end.lump is not None or end.mass > 0.0
 
 
-def _end_info(end: EndTerm) -> EndInfo:
+def _end_info(end: EndTerm, plan: EndPlan) -> EndInfo:
     mass, film, resistance = end.lump or (end.mass, end.stiffness if end.mass > 0.0 else 0.0, 0.0)
     return EndInfo(
         kind=end.kind,
@@ -480,4 +483,5 @@ def _end_info(end: EndTerm) -> EndInfo:
         mass=mass,
         resistance=resistance,
         film=film,
+        classification=plan.classification,
     )

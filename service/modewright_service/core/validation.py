@@ -192,9 +192,9 @@ def _check_geometry(problem: Problem, faults: _Faults) -> None:
         return
     if start < 0.0:
         faults.add(Reason.BAD_DOMAIN, "layers[0].start", "a radius must not be negative", start)
-    elif start == 0.0:
-        message = "the centre r = 0 is a singular end, which this version does not handle"
-        faults.add(Reason.UNSUPPORTED_END, "layers[0].start", message, start)
+    elif start == 0.0 and not isinstance(problem.left, Bounded | Neumann):
+        message = "at the centre r = 0 there is no surface: only bounded (or neumann, the same) suits it"
+        faults.add(Reason.BAD_END_CONDITION, "left.kind", message, type(problem.left).__name__.lower())
 
 
 def _check_coefficients(layer: Layer, path: str, faults: _Faults) -> None:
@@ -301,7 +301,7 @@ def _check_coverage(x: FloatArray, where: str, layer: Layer, faults: _Faults) ->
 def _check_end(end: End, side: str, faults: _Faults) -> None:
     reason = Reason.BAD_END_CONDITION
     match end:
-        case Dirichlet() | Neumann():
+        case Dirichlet() | Neumann() | Bounded():
             pass
         case Robin(alpha, beta):
             finite = [faults.finite(alpha, f"{side}.alpha"), faults.finite(beta, f"{side}.beta")]
@@ -315,9 +315,6 @@ def _check_end(end: End, side: str, faults: _Faults) -> None:
             faults.non_negative(mass, f"{side}.mass", reason)
             faults.non_negative(film, f"{side}.film", reason)
             faults.non_negative(resistance, f"{side}.resistance", reason)
-        case Bounded():
-            message = "the principal solution at a singular end is not handled by this version"
-            faults.add(Reason.UNSUPPORTED_END, f"{side}.kind", message, "bounded")
         case _:
             faults.add(reason, f"{side}.kind", "unknown end condition", type(end).__name__)
 

@@ -43,9 +43,11 @@ def estimate(problem: Problem, modes: int, poll: Callable[[], None]) -> Estimate
     import numpy as np
 
     from modewright_service.core.approximation import approximate
+    from modewright_service.core.end_plan import plan_ends
     from modewright_service.core.mesh import fundamental
 
-    mesh = approximate(problem, poll=poll)
+    plans = plan_ends(problem)
+    mesh = approximate(problem, ends=(plans[0].map, plans[1].map), poll=poll)
     pieces = int(mesh.edges.size - 1)
     elements = max(pieces, int(np.ceil(np.pi * (modes + 1) / _PHASE)))
     seconds = _SECONDS_FIXED + elements * (_SECONDS_ELEMENT + modes * _SECONDS_MODE_ELEMENT)
