@@ -17,7 +17,6 @@ from modewright_service.core.errors import (
     Violation,
 )
 from modewright_service.core.problem import (
-    Bounded,
     Constant,
     Coupling,
     CouplingKind,
@@ -71,7 +70,7 @@ FAULTS: list[tuple[Problem, str, str, str]] = [
     (layers((0, INF), (INF, 1)), "NOT_FINITE", "layers[0].end", "inf"),
     (layers((0, INF)), "UNSUPPORTED_INTERVAL", "layers[0].end", "inf"),
     (layers((-INF, 0)), "UNSUPPORTED_INTERVAL", "layers[0].start", "-inf"),
-    (layers((0, 1), geometry=Geometry.CYLINDRICAL), "UNSUPPORTED_END", "layers[0].start", "0"),
+    (layers((0, 1), geometry=Geometry.CYLINDRICAL), "BAD_END_CONDITION", "left.kind", "dirichlet"),
     (layers((-1, 1), geometry=Geometry.SPHERICAL), "BAD_DOMAIN", "layers[0].start", "-1"),
     (one_layer(p=Constant(-2.0)), "NEGATIVE_COEFFICIENT", "layers[0].p", "-2.0"),
     (one_layer(p=Constant(0.0)), "UNSUPPORTED_COEFFICIENT", "layers[0].p", "0.0"),
@@ -103,7 +102,6 @@ FAULTS: list[tuple[Problem, str, str, str]] = [
     (two_layers(left=Lump(-1.0)), "BAD_END_CONDITION", "left.mass", "-1.0"),
     (two_layers(left=Lump(1.0, -2.0)), "BAD_END_CONDITION", "left.film", "-2.0"),
     (two_layers(left=Lump(1.0, 0.0, -3.0)), "BAD_END_CONDITION", "left.resistance", "-3.0"),
-    (two_layers(left=Bounded()), "UNSUPPORTED_END", "left.kind", "bounded"),
     (two_layers(left=None), "BAD_END_CONDITION", "left.kind", "NoneType"),
     (two_layers(interfaces=(Interface(2.0),)), "BAD_INTERFACE", "interfaces[0].x", "2.0"),
     (two_layers(interfaces=(Interface(0.0),)), "BAD_INTERFACE", "interfaces[0].x", "0.0"),
@@ -142,7 +140,7 @@ def test_all_faults_are_reported_at_once() -> None:
     problem = Problem(
         (Layer("a", 0, 1, Constant(-1), Expression("sinn(x)"), Constant(NAN)), Layer("a", 1.1, 2)),
         left=Film(-1),
-        right=Bounded(),
+        right=Robin(0.0, 0.0),
     )
     with pytest.raises(InvalidProblem) as caught:
         validate(problem)
@@ -153,7 +151,7 @@ def test_all_faults_are_reported_at_once() -> None:
         "layers[0].q",
         "layers[0].w",
         "left.film",
-        "right.kind",
+        "right.alpha",
     ]
 
 

@@ -200,9 +200,9 @@ PROBLEMS: dict[str, tuple[Document, Bad]] = {
         _document(left={"kind": "frozen"}),
         Bad(InvalidProblem, "BAD_END_CONDITION", "left.kind", "frozen"),
     ),
-    "a bounded end": (
+    "a bounded end that is regular": (
         _document(left={"kind": "bounded"}),
-        Bad(Unsupported, "UNSUPPORTED_END", "left.kind", "bounded"),
+        Bad(InvalidProblem, "BAD_END_CONDITION", "left.kind", "bounded"),
     ),
     "coupled ends": (
         {"layers": GOOD["layers"], "coupling": {"kind": "periodic"}},
@@ -222,7 +222,7 @@ PROBLEMS: dict[str, tuple[Document, Bad]] = {
     ),
     "the centre of a cylinder": (
         _document(geometry="cylindrical"),
-        Bad(Unsupported, "UNSUPPORTED_END", "layers[0].start", "0"),
+        Bad(InvalidProblem, "BAD_END_CONDITION", "left.kind", ""),
     ),
     "a negative radius": (
         _document(geometry="spherical", layers_0_start=-0.1),

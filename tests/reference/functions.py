@@ -32,7 +32,8 @@ def _end(end: dict[str, Any], side: str, factor: float) -> DenseEnd:
     match end["kind"]:
         case "dirichlet":
             return DenseEnd(dirichlet=True)
-        case "neumann":
+        case "neumann" | "bounded":
+            # Lambda, which is all that singular records are read for, depends on no condition
             return DenseEnd()
         case "robin":
             outward = end["beta"] if side == "right" else -end["beta"]

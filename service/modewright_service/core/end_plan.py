@@ -16,7 +16,7 @@ from typing import Any
 import mpmath
 import numpy as np
 
-from .description import Bounded, Constant, Dirichlet, End, Expression, Neumann, Problem, Robin
+from .description import Bounded, Constant, Dirichlet, End, Expression, Film, Neumann, Problem, Robin
 from .end_elements import EndMap
 from .end_fitting import choose_map
 from .errors import CoreError, InvalidProblem, Reason, Unsupported
@@ -113,13 +113,12 @@ def _regular_condition(end: End, side: str) -> str:
     match end:
         case Dirichlet() | Robin(beta=0.0):
             return "dirichlet"
-        case Neumann() | Robin(alpha=0.0):
+        case Neumann() | Robin(alpha=0.0) | Film(0.0):
             return "neumann"
         case Bounded():
             raise _condition(side, "the end is regular: its condition must be stated", "bounded")
-    message = "beside a coefficient that is zero or infinite at a regular end only dirichlet or neumann is
-    handled" raise Unsupported.at(Reason.UNSUPPORTED_END, f"{side}.kind", message,
-    type(end).__name__.lower())
+    message = "beside a coefficient that is zero or infinite only dirichlet and neumann are handled"
+    raise Unsupported.at(Reason.UNSUPPORTED_END, f"{side}.kind", message, type(end).__name__.lower())
 
 
 def _check_singular(found: Exponents, kappa: float, side: str) -> None:
@@ -131,8 +130,8 @@ def _check_singular(found: Exponents, kappa: float, side: str) -> None:
         number: object = found.q_exponent if np.isnan(found.d2) else found.d2
         raise Unsupported.at(Reason.UNSUPPORTED_END, side, message, number)
     if kappa <= _EXACT:
-        message = "2 + (power of w) - (power of p) must be positive beside this end: else the spectrum is
-        not discrete" raise Unsupported.at(Reason.UNSUPPORTED_END, side, message, kappa)
+        message = "p vanishes by two powers more than w beside this end, or more: the spectrum is not discrete"
+        raise Unsupported.at(Reason.UNSUPPORTED_END, side, message, kappa)
 
 
 def _condition(side: str, message: str, word: str) -> CoreError:
