@@ -112,8 +112,8 @@ def test_parseval(name: str, bases: dict[str, modewright.Basis]) -> None:
     projection = bases[name].project(_expression(record), details=True)
     explained = float(np.sum(_expected(record) ** 2))
     exact = {
-        # integral of x^2 (1-x)^2, of x^2, of 1, of exp(2x), of x^2 and 1/2 of the mass at 1, of x^5, of x, of 1
-        # on (0, 1), of exp(2x) / sqrt(1-x^2) on (-1, 1): pi I_0(2)
+        # integral of x^2 (1-x)^2, of x^2, of 1, of exp(2x), of x^2 and 1/2 of the mass at 1, of x^5, of x,
+        # of 1 on (0, 1), of exp(2x) / sqrt(1-x^2) on (-1, 1): pi I_0(2)
         "parabola-sine": 1.0 / 30.0,
         "linear-cosine": 1.0 / 3.0,
         "one-plate-biot1": 1.0,
