@@ -227,9 +227,11 @@ class Pieces:
             if quantity != "derivative":
                 factor *= self.coefficient_at("p", element, t)
             if quantity == "flux-density":
-                # at a centre the end element has its own rule
                 radius = np.where(x != 0.0, x, 1.0) if self._ends else x
                 factor /= -(radius**record.geometry)
+            for piece in self._ends.values():
+                # which have their own rule; p may be infinite there
+                factor[element == piece.element] = 1.0
             table *= factor
         stops = np.append(starts[1:], t.size)
         for e, start, stop in zip(present.tolist(), starts.tolist(), stops.tolist(), strict=True):

@@ -100,7 +100,8 @@ def _graded(piece: EndPiece, near: float, far: float, whole: bool) -> list[float
         if whole:
             return [0.0, far]
         # the first power that is not whole, and how small the rest of its integral must become
-        power = piece.gamma + 1.0 + min(2.0 * piece.s if piece.s > 0.0 else 1.0, 1.0 / piece.m, 1.0)
+        powers = [power for power in (piece.s, 2.0 * piece.s, 1.0 / piece.m) if not _whole(power)]
+        power = max(piece.gamma + 1.0 + min([*powers, 2.0]), 0.1)
         steps = min(int(np.ceil(-np.log(_ROUNDING) / (power * np.log(_RATIO)))), _MOST_PARTS)
         return [0.0, *(far * _RATIO ** np.arange(-steps, 1.0)).tolist()]
     steps = max(1, int(np.ceil(np.log(far / near) / np.log(_RATIO))))
