@@ -229,9 +229,8 @@ class Pieces:
             if quantity == "flux-density":
                 radius = np.where(x != 0.0, x, 1.0) if self._ends else x
                 factor /= -(radius**record.geometry)
-            for piece in self._ends.values():
-                # which have their own rule; p may be infinite there
-                factor[element == piece.element] = 1.0
+            # end elements have their own rule; p may be infinite there
+            factor[np.isin(element, list(self._ends))] = 1.0
             table *= factor
         stops = np.append(starts[1:], t.size)
         for e, start, stop in zip(present.tolist(), starts.tolist(), stops.tolist(), strict=True):

@@ -75,16 +75,17 @@ def test_every_kind_of_end(end: problem_pb2.EndCondition, expected: core.End) ->
 
 def test_resolved_ends_say_what_was_solved() -> None:
     message = _full()
-    ends = ends_message(problem_from(message))
+    ends = ends_message(problem_from(message), ("regular", "limit-point"))
     # At r = 1 the factor r is 1; at r = 2 a film of 2 counts twice.
     assert ends.left == basis_pb2.EndReport(
         kind=problem_pb2.END_KIND_LUMP, end_class=basis_pb2.END_CLASS_REGULAR, mass=3.0, resistance=0.5
     )
     assert ends.right == basis_pb2.EndReport(
-        kind=problem_pb2.END_KIND_FILM, end_class=basis_pb2.END_CLASS_REGULAR, stiffness=4.0
+        kind=problem_pb2.END_KIND_FILM, end_class=basis_pb2.END_CLASS_LIMIT_POINT, stiffness=4.0
     )
     message.right.CopyFrom(problem_pb2.EndCondition(kind=problem_pb2.END_KIND_ROBIN, alpha=1.0, beta=0.0))
-    assert ends_message(problem_from(message)).right.kind == problem_pb2.END_KIND_DIRICHLET
+    fixed = ends_message(problem_from(message), ("regular", "regular"))
+    assert fixed.right.kind == problem_pb2.END_KIND_DIRICHLET
 
 
 def _broken(**changes: object) -> problem_pb2.Problem:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -115,7 +116,7 @@ def _fit(
 def _parts(mesh: CoefficientMesh, element: int, end: EndMap, cuts: list[float], left: bool) -> list[_Part]:
     """Plain parts between ascending distances `cuts`, cut further where a polynomial does not converge."""
     found = []
-    pending = list(zip(cuts[:-1], cuts[1:], strict=True))
+    pending = list(itertools.pairwise(cuts))
     while pending:
         near, far = pending.pop()
         part, good = _fit(mesh, element, end, near, far, left)

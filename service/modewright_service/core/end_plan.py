@@ -130,7 +130,7 @@ def _check_singular(found: Exponents, kappa: float, side: str) -> None:
         number: object = found.q_exponent if np.isnan(found.d2) else found.d2
         raise Unsupported.at(Reason.UNSUPPORTED_END, side, message, number)
     if kappa <= _EXACT:
-        message = "p vanishes by two powers more than w beside this end, or more: the spectrum is not discrete"
+        message = "p vanishes by two powers more than w beside this end: the spectrum is not discrete"
         raise Unsupported.at(Reason.UNSUPPORTED_END, side, message, kappa)
 
 

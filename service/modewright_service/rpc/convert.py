@@ -63,6 +63,12 @@ _END_NAMES: Final = {
     "lump": problem_pb2.END_KIND_LUMP,
     "bounded": problem_pb2.END_KIND_BOUNDED,
 }
+_END_CLASSES: Final = {
+    "regular": basis_pb2.END_CLASS_REGULAR,
+    "limit-circle": basis_pb2.END_CLASS_LIMIT_CIRCLE,
+    "limit-point": basis_pb2.END_CLASS_LIMIT_POINT,
+    "undetermined": basis_pb2.END_CLASS_UNDETERMINED,
+}
 # kind -> (required numbers, optional ones)
 _END_NUMBERS: Final[dict[int, tuple[tuple[str, ...], tuple[str, ...]]]] = {
     problem_pb2.END_KIND_DIRICHLET: ((), ()),
@@ -266,18 +272,21 @@ def checked_key(key: str, field: str) -> str:
 # ---- answers ----
 
 
-def ends_message(problem: core.Problem) -> basis_pb2.Ends:
-    """What the ends of a validated problem are resolved to."""
+def ends_message(problem: core.Problem, classes: tuple[str, str]) -> basis_pb2.Ends:
+    """What the ends of a validated problem are resolved to, with the classes that the core gives them."""
     resolved = core.resolve(problem)
-    return basis_pb2.Ends(left=_end_report(resolved.left), right=_end_report(resolved.right))
+    left, right = (
+        _end_report(term, name) for term, name in zip((resolved.left, resolved.right), classes, strict=True)
+    )
+    return basis_pb2.Ends(left=left, right=right)
 
 
-def _end_report(term: core.EndTerm) -> basis_pb2.EndReport:
+def _end_report(term: core.EndTerm, end_class: str) -> basis_pb2.EndReport:
     mass, film, resistance = term.lump or (term.mass, 0.0, 0.0)
     kind = "dirichlet" if term.dirichlet else term.kind
     return basis_pb2.EndReport(
         kind=_END_NAMES[kind],
-        end_class=basis_pb2.END_CLASS_REGULAR,
+        end_class=_END_CLASSES[end_class],
         stiffness=term.stiffness,
         mass=mass,
         resistance=resistance,
@@ -312,7 +321,7 @@ def solve_response(
         groups=record.groups[:n].tolist(),
         confirmed=[confirmed[int(value)] for value in record.confirmed[:n]],
         scale=record.scale,
-        ends=ends_message(wanted.problem),
+        ends=ends_message(wanted.problem, (record.left.classification, record.right.classification)),
         answered_from_cache=shared,
         server_solve_count=solve_count,
         solve_seconds=seconds,

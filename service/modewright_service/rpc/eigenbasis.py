@@ -55,7 +55,7 @@ class EigenbasisServicer(eigenbasis_service_pb2_grpc.EigenbasisServiceServicer):
                 kept.record.count if kept else wanted.rung,
                 kept.record.rtol if kept else wanted.rtol,
             ),
-            ends=convert.ends_message(wanted.problem),
+            ends=convert.ends_message(wanted.problem, forecast.end_classes),
             scale=forecast.scale,
             cached=kept is not None,
             cost=solve_pb2.CostEstimate(

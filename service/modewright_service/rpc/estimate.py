@@ -24,7 +24,7 @@ _SECONDS_MODE_ELEMENT: Final = 1.0e-5
 class Estimate:
     """pieces: polynomial pieces that the coefficients need. unknowns: of the discretised problem. seconds: of
     one core, an order of magnitude. scale: (pi / integral of sqrt(w/p) dx)^2, 0 where w vanishes everywhere.
-    remarks: what is valid but unusual.
+    remarks: what is valid but unusual. end_classes: of the left and the right end.
     """
 
     pieces: int
@@ -32,6 +32,7 @@ class Estimate:
     seconds: float
     scale: float
     remarks: tuple[str, ...]
+    end_classes: tuple[str, str]
 
 
 def estimate(problem: Problem, modes: int, poll: Callable[[], None]) -> Estimate:
@@ -62,4 +63,11 @@ def estimate(problem: Problem, modes: int, poll: Callable[[], None]) -> Estimate
         remarks.append(
             f"the coefficients are resolved to {loose:.1g} only, on the largest mesh; bounds will be as wide"
         )
-    return Estimate(pieces, elements * _UNKNOWNS, seconds, fundamental(mesh), tuple(remarks))
+    return Estimate(
+        pieces,
+        elements * _UNKNOWNS,
+        seconds,
+        fundamental(mesh),
+        tuple(remarks),
+        (plans[0].classification, plans[1].classification),
+    )
