@@ -24,7 +24,7 @@ from modewright_service.core.problem import (
     Neumann,
     Problem,
 )
-from modewright_service.core.solve import solve
+from modewright_service.core.solve import SolveOptions, solve
 from modewright_service.core.transforms.grid import build_grid
 
 Array = NDArray[np.float64]
@@ -140,6 +140,23 @@ def test_pure_powers(alpha: float, gamma: float, q0: float, natural: bool) -> No
     grid = build_grid(record, record.edges[[0, -1]], 0)
     modes = grid.pieces.at(grid.element, grid.t)
     assert float(np.abs((modes * grid.weight) @ modes.T - np.eye(12)).max()) <= 1e-13
+
+
+@pytest.mark.parametrize("degree", [4, 8])
+@pytest.mark.parametrize(("alpha", "gamma", "q0"), [(1.0, 1.0, 0.3), (1.5, 0.0, 0.0)])
+def test_starved(alpha: float, gamma: float, q0: float, degree: int) -> None:
+    """Elements far too coarse, no refinement: the bounds are wide, the truth (as above) is inside."""
+    options = SolveOptions(degree=degree, phase=8.0, passes=0)
+    problem = _problem(f"x**{alpha}", f"{q0!r}*x**({alpha - 2.0})", f"x**({gamma})")
+    record = solve(problem, 10, 1e-9, options=options)
+    kappa = 2.0 + gamma - alpha
+    zeros = _bessel_zeros(float(np.sqrt((1.0 - alpha) ** 2 + 4.0 * q0)) / kappa, 10)
+    exact = np.array([float((kappa * z / 2) ** 2) for z in zeros])
+    assert bool(np.all(record.lower <= exact) and np.all(exact <= record.upper))
+    error = record.eigenvalues - exact
+    seen = error > 1e-11 * exact
+    assert seen.any()
+    assert bool(np.all((record.upper - record.lower)[seen] <= 50.0 * error[seen]))
 
 
 @pytest.mark.parametrize("k", [1.6, 1.25, 2.5, 0.8])
