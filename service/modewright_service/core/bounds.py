@@ -90,14 +90,25 @@ def coefficient_terms(mesh: CoefficientMesh, lam: Array) -> Array:
     if not np.isfinite(depth):
         # w vanishes where q < 0: the deepest q against the mean weight stands in
         depth = float(-part.q_lower[plain].min()) * float(lengths.sum()) / total_w
+    if mesh.end_maps:
+        # w may vanish faster than q beside an end: the integral of q against the mean weight, as above
+        sunk = float((np.minimum(mesh.q @ vander, 0.0) * dx).sum())
+        depth = min(depth, -2.0 * sunk / total_w)
     for element, end in mesh.end_maps:
-        depth = max(depth, _end_depth(mesh, part, element, end))
+        depth = max(depth, _end_depth(mesh, part, element, end, total_w))
     energy = np.abs(lam) + depth
     peak = 2.0 / total_w + 2.0 * path * energy
     bounded = np.isfinite(mesh.w_error)
     relative = float(mesh.p_error.max()) + float(mesh.w_error[bounded].max(initial=0.0))
     relative /= 1.0 - min(0.5, float(mesh.p_error.max()))
     q_term = np.minimum(2.0 * float(direct.max()), float((mesh.q_error * lengths).sum()) * peak)
+    if mesh.end_maps:
+        # where q > 0, as steeply as beside a singular end, int q u^2 is part of the energy
+        positive = plain & (part.q_lower > 2.0 * mesh.q_error)
+        share = float((mesh.q_error[positive] / part.q_lower[positive]).max(initial=0.0))
+        rest = float((mesh.q_error * lengths)[~positive].sum()) * peak
+        others = np.minimum(2.0 * float(direct[~positive].max(initial=0.0)), rest)
+        q_term = np.minimum(q_term, 2.0 * share * energy + others)
     w_term = np.abs(lam) * float((mesh.w_absolute * lengths)[~bounded].sum()) * peak
     result: Array = relative * energy + q_term + w_term
     for element, end in mesh.end_maps:
@@ -105,7 +116,7 @@ def coefficient_terms(mesh: CoefficientMesh, lam: Array) -> Array:
     return result
 
 
-def _end_depth(mesh: CoefficientMesh, part: Ranges, element: int, end: EndMap) -> float:
+def _end_depth(mesh: CoefficientMesh, part: Ranges, element: int, end: EndMap, total_w: float) -> float:
     """max(-r / w) on an end element; where r is more singular than w, beyond the distance within which half
     of the p-energy outweighs it (the inequality of :func:`_end_term`).
     """
@@ -113,9 +124,13 @@ def _end_depth(mesh: CoefficientMesh, part: Ranges, element: int, end: EndMap) -
     if below <= 0.0:
         return 0.0
     ratio = below / float(part.w_lower[element])
+    scale = float(mesh.edges[element + 1] - mesh.edges[element]) * end.m
+    first = end.power + 1.0
+    if 8.0 * scale**2 * below < float(part.p_lower[element]) * first**2:
+        # half of the p-energy outweighs all of it, but for a part of the square at the inner node
+        ratio = min(ratio, 8.0 * scale * below / (first * total_w))
     if end.w_steps == 0:
         return ratio
-    scale = float(mesh.edges[element + 1] - mesh.edges[element]) * end.m
     near = min(1.0, float(part.p_lower[element]) * (end.power + 1.0) ** 2 / (8.0 * scale**2 * below))
     return 2.0 * ratio * near ** (-end.w_steps)
 
@@ -233,7 +248,10 @@ def _varying_ends(mesh: CoefficientMesh) -> list[int]:
 
 def _graded(mesh: CoefficientMesh, pieces: int) -> CoefficientMesh:
     """The mesh with end elements cut down: their constants' share of the error like that of the others."""
-    return graded(mesh, _varying_ends(mesh), min(1.0, 4.0 / pieces))
+    chosen = _varying_ends(mesh)
+    # the phase of an end element falls like its width to the power kappa / 2
+    kappa = min([end.steps / end.m for element, end in mesh.end_maps if element in chosen], default=2.0)
+    return graded(mesh, chosen, min(1.0, 4.0 / pieces) ** max(1.0, 2.0 / kappa))
 
 
 def _cuts(mesh: CoefficientMesh, pieces: int) -> IntArray:

@@ -144,7 +144,7 @@ class EndReference:
     """Shape functions of an end element: column 0 the left vertex, 1 the right one, then k - 1 bubbles.
 
     The singular end's vertex is a column of zeros. t, weights: (G,) Gauss-Jacobi points, 0 at the end.
-    values, slopes: (G, k+1), slopes along +x per unit of t. at_end: (k+1,) values at the singular end.
+    values, slopes: (G, k+1), slopes along +x per unit of t.
     to_legendre: (k+1, k+1) as in :class:`.elements.Reference`. running: (G, G), a load at the points to the
     flux along +x that it adds up to from the singular end, both with t^(m D) divided out.
     """
@@ -153,7 +153,6 @@ class EndReference:
     weights: Array
     values: Array
     slopes: Array
-    at_end: Array
     to_legendre: Array
     running: Array
 
@@ -183,7 +182,6 @@ def end_reference(
         return values, slopes
 
     values, slopes = shapes(nodes)
-    at_end, _ = shapes(np.zeros(1, dtype=EXTENDED))
     tau, project = projector(degree)
     side = 1 if left else -1
     to_legendre = shapes((1 + side * tau) / 2)[0].T @ project
@@ -193,7 +191,7 @@ def end_reference(
     products = _jacobi(np.outer(nodes, nodes).ravel(), points, 0.0, power)[0]
     scaled = np.einsum("k,ikn->in", weights, products.reshape(points, points, points))
     running = side * nodes[:, None] * (scaled @ analysis)
-    parts = (nodes, weights, values, side * slopes, at_end[0], to_legendre, running)
+    parts = (nodes, weights, values, side * slopes, to_legendre, running)
     return EndReference(*(part.astype(np.float64) for part in parts))
 
 

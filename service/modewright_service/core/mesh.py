@@ -33,6 +33,14 @@ def _sampled(mesh: CoefficientMesh, points: int = _POINTS) -> tuple[Array, Array
     dx = 0.5 * np.diff(mesh.edges)[:, None] * weight
     p, q, w = mesh.p @ vander, mesh.q @ vander, mesh.w @ vander
     for element, end in mesh.end_maps:
+        if end.alpha != 1.0:
+            # Langer's term: by Hardy's inequality a negative q0 p/y^2 binds nothing as long as D^2 >= 0
+            left, right = mesh.edges[:-1, None], mesh.edges[1:, None]
+            x = 0.5 * (left + right) + 0.5 * (right - left) * t
+            y = x - mesh.edges[0] if element == 0 else mesh.edges[-1] - x
+            lifted = q + 0.25 * (1.0 - end.alpha) ** 2 * p / y**2
+            q = np.where((q < 0.0) & mesh.plain[:, None], np.minimum(lifted, 0.0), q)
+    for element, end in mesh.end_maps:
         own = end_samples(mesh, element, end, 0.5 * (t + 1.0))
         p[element], q[element], w[element], dx[element] = own.p, own.q, own.w, 0.5 * weight
     return p, q, w, dx

@@ -87,8 +87,7 @@ def _signs(chain: Chain, shapes: Field, nodes: Field) -> Field:
     # slope at t = -1 of the shape functions of the first element
     slope = shapes[0] @ _end_slopes(chain.elements.reference.degree, -1.0)
     if chain.elements.mesh.left_map is not None:
-        # u = (y/h)^s v: the sign of v at the end
-        lead = shapes[0] @ chain.elements.ends[0][1].at_end
+        lead = _first_value(chain.elements, shapes[0])
     elif chain.left_fixed:
         lead = slope
     else:
@@ -102,6 +101,19 @@ def _signs(chain: Chain, shapes: Field, nodes: Field) -> Field:
         phase: Field = np.where(size > 0.0, lead.conj() / np.where(size > 0.0, size, 1.0), 1.0)
         return phase
     return np.where(lead < 0.0, -1.0, 1.0)
+
+
+def _first_value(el: Elements, shapes: Field) -> Field:
+    """(T,) v at the first point of the left end element at which it is more than rounding.
+
+    Rounding is relative to t^(b/2) v, t^b the weight of the mass: with a high b v itself is noise at the end.
+    """
+    own, end = el.ends[0][1], el.mesh.end_maps[0][1]
+    values = shapes @ own.values.T
+    size = np.abs(values) * own.t ** (0.5 * max(end.power + end.w_steps, 0.0))
+    first = np.argmax(size > 1e-6 * size.max(axis=1, keepdims=True), axis=1)
+    result: Field = np.take_along_axis(values, first[:, None], axis=1)[:, 0]
+    return result
 
 
 def _end_slopes(degree: int, t: float) -> Array:
@@ -187,6 +199,10 @@ def interior_zeros(chain: Chain, modes: Modes, legendre: Field) -> NDArray[np.in
     vander = np.polynomial.legendre.legvander(t, k)
     coefficients = legendre.reshape(legendre.shape[0], el.count, k + 1)
     samples = np.matmul(coefficients, vander.T)
+    for element, end in el.mesh.end_maps:
+        # in the norm that its rounding is small in
+        inward = 0.5 * (1.0 + t) if element == 0 else 0.5 * (1.0 - t)
+        samples[:, element] *= inward ** (0.5 * max(end.power + end.w_steps, 0.0))
     # what is below the rounding of its own element, or decayed to the end of the range of doubles, has no
     # sign and takes the one before it
     peak = np.max(np.abs(samples), axis=2, keepdims=True)
