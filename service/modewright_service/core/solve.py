@@ -290,8 +290,8 @@ def _resolve_top(
     for _ in range(60):
         poll()
         top = top_for_phase(coefficients, phase, scale)
-        # beside a singular end less phase than this binds nothing, however deep it goes
-        bottom = 1e-2 if coefficients.end_maps else 1e-6
+        # beside a singular end little phase may go very deep; what it binds all the same is looked for below
+        bottom = 0.3 if coefficients.end_maps else 1e-6
         low = min(floor, top_for_phase(coefficients, bottom, scale))
         degree, radians = (
             (chosen.degree, chosen.phase) if chosen.degree else choose_degree(coefficients, low, top)
