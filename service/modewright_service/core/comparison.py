@@ -8,18 +8,22 @@ every element of the discretisation:
 
     count(nu) <= m   implies   lambda_m >= nu.
 
+Where a coefficient varies little over a piece, its mean less a term of second order serves instead of its
+least value (:mod:`.averages`).
+
 The state is (u, p u') with u >= 0, rescaled freely; a change of sign adds one to the count.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
 from modewright_service.core.approximation import CoefficientMesh, ranges
+from modewright_service.core.averages import Averages, averages
 from modewright_service.core.problem import EndTerm, Resolved
 
 __all__ = ["Comparison", "build_comparison"]
@@ -37,7 +41,7 @@ class Comparison:
 
     length, p, q: (P,). w_lower, w_upper: (P,), used for nu < 0 and nu >= 0. resistance, spring, mass: (P,)
     point terms at the right end of each piece (the mass and spring before the resistance). left, right: the
-    ends.
+    ends. means: the bounds of second order.
     """
 
     length: Array
@@ -50,6 +54,7 @@ class Comparison:
     mass: Array
     left: EndTerm
     right: EndTerm
+    means: Averages
 
     @property
     def pieces(self) -> int:
@@ -77,23 +82,33 @@ def build_comparison(mesh: CoefficientMesh, resolved: Resolved, cuts: IntArray) 
         bounds.w_upper,
         *(resistance, spring, mass),
         *(resolved.left, resolved.right),
+        averages(bounds, float(bounds.edges[-1] - bounds.edges[0])),
     )
 
 
 def _count(c: Comparison, nu: Array, fraction: float, poll: Callable[[], None] | None) -> IntArray:
     count = np.zeros(nu.size, dtype=np.int64)
     u, v = _start(c.left, nu, fraction, count)
-    negative = nu < 0.0
-    for j in range(c.pieces):
-        if poll is not None and j % _POLL_EVERY == 0:
-            poll()
-        load = c.q[j] - nu * np.where(negative, c.w_lower[j], c.w_upper[j])
-        u, v = _advance(u, v, c.length[j], fraction * c.p[j], load, count)
+    for j, p, load in _pieces(c, nu, fraction, poll):
+        u, v = _advance(u, v, c.length[j], p, load, count)
         if c.spring[j] != 0.0 or c.mass[j] != 0.0:
             v = v + (c.spring[j] - nu * c.mass[j]) * u
         if c.resistance[j] > 0.0:
             u, v = _through(u, v, c.resistance[j] / fraction, count)
     return _finish(c.right, nu, fraction, u, v, count)
+
+
+def _pieces(
+    c: Comparison, nu: Array, fraction: float, poll: Callable[[], None] | None
+) -> Iterator[tuple[int, Array, Array]]:
+    """Pieces from left to right with p and q - nu w (T,) on each."""
+    negative = nu < 0.0
+    for j in range(c.pieces):
+        if poll is not None and j % _POLL_EVERY == 0:
+            poll()
+        load = c.q[j] - nu * np.where(negative, c.w_lower[j], c.w_upper[j])
+        p, mean, usable = c.means.piece(j, nu, fraction)
+        yield j, np.where(usable, p, fraction * c.p[j]), np.where(usable, mean, load)
 
 
 def _start(end: EndTerm, nu: Array, fraction: float, count: IntArray) -> tuple[Array, Array]:
@@ -131,7 +146,7 @@ def _positive(u: Array, v: Array, count: IntArray) -> tuple[Array, Array]:
     return u * sign, v * sign
 
 
-def _advance(u: Array, v: Array, h: float, p: float, load: Array, count: IntArray) -> tuple[Array, Array]:
+def _advance(u: Array, v: Array, h: float, p: Array, load: Array, count: IntArray) -> tuple[Array, Array]:
     """Over one piece of constant p and load = q - nu w; u >= 0 in and out, the larger of |u|, |v| h / p
     normalised to one.
     """
