@@ -16,7 +16,7 @@ modulus. T <= (h / m) (1 + v^2 / (1 - v)) for a mean m of p from which p differs
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -48,6 +48,11 @@ class Averages:
     w_size: Array
     settled: NDArray[np.bool_]
     total: float
+
+    def part(self, pieces: slice) -> Averages:
+        """Those of some of the pieces."""
+        names = ("length", "p", "q", "w_lower", "w_upper", "q_size", "w_size", "settled")
+        return replace(self, **{name: getattr(self, name)[pieces] for name in names})
 
     def piece(self, j: int, nu: Array, fraction: float) -> tuple[Array, Array, NDArray[np.bool_]]:
         """p and q - nu w (T,) of piece j at each nu, and where they are worth having.
@@ -87,7 +92,8 @@ def averages(bounds: Ranges, total: float) -> Averages:
         bounds.q_mean_lower,
         bounds.w_mean_lower,
         bounds.w_mean_upper,
-        *(np.where(settled, size, 0.0) for size in sizes),
+        np.where(settled, sizes[0], 0.0),
+        np.where(settled, sizes[1], 0.0),
         settled,
         total,
     )

@@ -67,12 +67,13 @@ def coefficient_terms(mesh: CoefficientMesh, resolved: Resolved, lam: Array, fou
     found: (T,) the energies of the modes (:class:`.modes.FluxDefect`).
 
     With relative errors d_p and d_w, (d_p / (1 - d_p) + d_w) (|lambda| + depth), depth = max(-q / w) bounding
-    the p-energy by lambda + depth, or what was found where negative springs add to it. Where they are large on short elements only (at the branch point of a
-    square root), integrals serve better: w off by d acts through int |d| u^2 <= int |d| dx sup u^2 with sup
-    u^2 <= 2 / int w + 2 int 1/p (lambda + depth) for a normalised u (its w-mean plus the energy of the way
-    from there), and p through int d_p / p dx sup (p u')^2, where p u' is bounded by its mean, from the energy,
-    plus the integral of |q - lambda w| |u| and what lumps and springs add. q off by d acts by max(d / w) or by
-    int |d| dx sup u^2, whichever is less. Infinite where nothing is known.
+    the p-energy by lambda + depth, or what was found where negative springs add to it. Where they are large
+    on short elements only (at the branch point of a square root), integrals serve better: w off by d acts
+    through int |d| u^2 <= int |d| dx sup u^2 with sup u^2 <= 2 / int w + 2 int 1/p (lambda + depth) for a
+    normalised u (its w-mean plus the energy of the way from there), and p through int d_p / p dx sup
+    (p u')^2, where p u' is bounded by its mean, from the energy, plus the integral of |q - lambda w| |u| and
+    what lumps and springs add. q off by d acts by max(d / w) or by int |d| dx sup u^2, whichever is less.
+    Infinite where nothing is known.
     """
     t, weight = np.polynomial.legendre.leggauss(8)
     vander = np.polynomial.legendre.legvander(t, mesh.p.shape[1] - 1).T
@@ -92,7 +93,7 @@ def coefficient_terms(mesh: CoefficientMesh, resolved: Resolved, lam: Array, fou
     energy = np.maximum(np.abs(lam) + depth, np.maximum.accumulate(found))
     peak = 2.0 / total_w + 2.0 * path * energy
     flux = _largest_flux(
-        mesh, resolved, lam, energy, peak, path, total_w, float(np.abs(mesh.q @ vander * dx).sum())
+        resolved, lam, energy, peak, path, total_w, float(np.abs(mesh.q @ vander * dx).sum())
     )
     p_term = _relative_or_integral(mesh.p_error, mesh.p_error * paths, energy, flux)
     w_term = _relative_or_integral(mesh.w_error, mesh.w_absolute * lengths, energy, np.abs(lam) * peak)
@@ -120,7 +121,6 @@ def _relative_or_integral(relative: Array, integral: Array, energy: Array, facto
 
 
 def _largest_flux(
-    mesh: CoefficientMesh,
     resolved: Resolved,
     lam: Array,
     energy: Array,
@@ -136,7 +136,7 @@ def _largest_flux(
     springs += sum(abs(e.stiffness) + (e.lump[1] if e.lump else 0.0) for e in ends)
     largest = np.sqrt(energy / path) + np.abs(lam) * (np.sqrt(total_w) + np.sqrt(masses))
     largest += (total_q + springs) * np.sqrt(peak)
-    modes = np.arange(1, lam.size + 1)
+    modes = np.arange(1.0, lam.size + 1.0)
     result: Array = modes * np.maximum.accumulate(largest**2)
     return result
 
