@@ -180,9 +180,11 @@ class WorkerPool:
         self._waiting.clear()
         for slot, worker in self._workers.items():
             self._board.cancel(slot)
-            worker.writer.close()
-        for spawned in self._spawned.values():
+            self._dismiss(worker)
+        unattended, self._spawned = list(self._spawned.values()), {}
+        for spawned in unattended:
             spawned.sock.close()
+            spawned.process.kill()
             await _reap(spawned.process)
         # Supervisors that wait for a worker see it end; those that wait to start one are cancelled.
         _, pending = (
@@ -194,6 +196,13 @@ class WorkerPool:
             if isinstance(result, Exception):
                 _log.error("a supervisor failed", exc_info=result)
         self._count()
+
+    def _dismiss(self, worker: _Worker) -> None:
+        """Have a worker end: by the end of its socket, or at once when it has nothing that it could lose."""
+        worker.writer.close()
+        if not worker.ready:
+            # Still importing the solver: it would look at its socket only after that.
+            worker.spawned.process.kill()
 
     # ---- the queue ----
 
@@ -299,6 +308,8 @@ class WorkerPool:
         reader, writer = await asyncio.open_connection(sock=spawned.sock)
         worker = _Worker(spawned, writer)
         self._workers[spawned.slot] = worker
+        if self._closing:  # begun while it connected
+            self._dismiss(worker)
         try:
             async with asyncio.timeout(self._limits.start) as starting:
                 while True:
