@@ -35,13 +35,14 @@ NO_RETRIES = [("grpc.enable_retries", 0), ("grpc.max_receive_message_length", 16
 class Running:
     """A service on a loop of its own in a thread of this process, with a channel to it.
 
-    credentials: of the channel, for a service with TLS.
+    credentials: of the channel, for a service with TLS. entry: "module:function" that workers solve with.
     """
 
     def __init__(
         self, folder: Path, credentials: grpc.ChannelCredentials | None = None, **settings: Any
     ) -> None:
         listen = settings.pop("listen", f"unix:{folder / 'service.sock'}")
+        self._entry = settings.pop("entry", "")
         given = {"workers": 1, "worker_nice": 0, "drain_seconds": 0.0, "grace_seconds": 5.0, **settings}
         self.settings = Settings(listen=listen, spool=folder / "spool", **given)
         self._loop = asyncio.new_event_loop()
@@ -61,7 +62,7 @@ class Running:
             raise
 
     async def _create(self) -> Service:
-        self._crew = hire(self.settings)
+        self._crew = hire(self.settings, self._entry)
         return Service(self.settings, self._crew)
 
     def mid_solve(self) -> int:

@@ -28,7 +28,7 @@ from modewright_service.process.slots import SlotBoard
 from modewright_service.process.spawn import Spawned, WorkerSetup, spawn
 from modewright_service.process.spool import Spool
 from modewright_service.store.counters import Counters
-from modewright_service.store.orders import Computed, Order, Progress
+from modewright_service.store.orders import Computed, Order, Progress, damaged
 
 __all__ = ["PoolLimits", "WorkerPool"]
 
@@ -379,11 +379,10 @@ class WorkerPool:
             case frames.Finished():
                 try:
                     data = self._spool.take(Path(message.path))
-                except OSError as error:
-                    _fail(
-                        ticket,
-                        CoreError(Reason.INTERNAL, f"the record cannot be read from the spool: {error}"),
-                    )
+                except (OSError, ValueError) as error:  # ValueError: an empty file cannot be mapped
+                    self._counters.records_damaged += 1
+                    _log.error("a record cannot be read from the spool", exc_info=error)
+                    _fail(ticket, damaged())
                     return
                 self._counters.solves_finished += 1
                 self._counters.solve_seconds.add(message.seconds)
