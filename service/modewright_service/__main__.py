@@ -63,6 +63,10 @@ def main(arguments: Sequence[str] | None = None) -> int:
         if flags.embedded:
             if flags.ready_fd is None or not flags.socket:
                 parser.error("--embedded needs --ready-fd and --socket")
+            try:
+                os.fstat(flags.ready_fd)
+            except OSError:
+                parser.error(f"--ready-fd: {flags.ready_fd} is not open")
             # The parent's environment may be meant for a service it runs elsewhere: only flags count here.
             settings = parse(flags, {}, listen=f"unix:{flags.socket}", **_EMBEDDED)
             return _run(settings, flags.ready_fd, Path(flags.folder) if flags.folder else None)

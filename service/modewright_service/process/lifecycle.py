@@ -140,18 +140,26 @@ class Service:
 
     def _bind(self, server: grpc.aio.Server) -> str:
         settings = self._settings
-        try:
-            if settings.tls_certificate:
-                from modewright_service.process.tls import server_credentials
+        credentials = None
+        if settings.tls_certificate:
+            from modewright_service.process.tls import server_credentials
 
+            try:
                 credentials = server_credentials(
                     settings.tls_certificate, settings.tls_key, settings.tls_client_ca
                 )
+            except OSError as error:
+                raise SettingsError(f"tls: cannot read {error.filename!r}: {error.strerror}") from error
+        try:
+            if credentials is not None:
                 port = server.add_secure_port(settings.listen, credentials)
             else:
                 port = server.add_insecure_port(settings.listen)
         except (OSError, RuntimeError, ValueError) as error:
-            raise SettingsError(f"listen: cannot serve on {settings.listen!r}: {error}") from error
+            # gRPC's own words end in advice on its debugging that helps nobody here.
+            reason = str(error).partition(";")[0]
+            doubt = "do the TLS files fit together, and is it free?" if credentials else "is it free?"
+            raise SettingsError(f"listen: cannot serve on {settings.listen!r}: {reason}: {doubt}") from error
         if settings.listen.startswith("unix:"):
             return settings.listen
         return f"{settings.listen.rpartition(':')[0]}:{port}"
