@@ -36,7 +36,9 @@ def _solve(
     _log.info("%s: %r", options.document, problem)
 
     def report(progress: modewright.Progress) -> None:
-        _log.info("%s for %.1f s", progress.stage, progress.elapsed_seconds)
+        _log.info(
+            "%s, %.1f s, %d steps of the solver", progress.stage, progress.elapsed_seconds, progress.steps
+        )
 
     basis = service.solve(problem, modes, rtol=rtol, progress=report if options.verbose else None)
     _log.info("basis %s, %d modes", basis.key, len(basis.eigenvalues))

@@ -165,7 +165,7 @@ class WorkerPool:
                 return Progress(computing=True, steps=self._board.steps(slot))
         for position, ticket in enumerate(self._waiting):
             if ticket.order is order:
-                return Progress(computing=False, position=position)
+                return Progress(computing=False, position=position, starting=not self.usable)
         # Computed; the record is being read.
         return Progress(computing=True, steps=order.steps)
 

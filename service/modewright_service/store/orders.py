@@ -46,11 +46,13 @@ class Progress:
     """How far an order is.
 
     computing: a worker has it. position: orders that wait before it. steps: life signs of the solver so far.
+    starting: it waits because no worker is ready for work yet.
     """
 
     computing: bool
     position: int = 0
     steps: int = 0
+    starting: bool = False
 
 
 def damaged() -> CoreError:
