@@ -15,7 +15,6 @@ class SolveStage(int, metaclass=_enum_type_wrapper.EnumTypeWrapper):
     SOLVE_STAGE_QUEUED: _ClassVar[SolveStage]
     SOLVE_STAGE_COMPUTING: _ClassVar[SolveStage]
     SOLVE_STAGE_STARTING: _ClassVar[SolveStage]
-
 SOLVE_STAGE_UNSPECIFIED: SolveStage
 SOLVE_STAGE_QUEUED: SolveStage
 SOLVE_STAGE_COMPUTING: SolveStage
@@ -27,25 +26,10 @@ class CheckRequest(_message.Message):
     SPECIFICATION_FIELD_NUMBER: _ClassVar[int]
     problem: _problem_pb2.Problem
     specification: _basis_pb2.BasisSpecification
-    def __init__(
-        self,
-        problem: _Optional[_Union[_problem_pb2.Problem, _Mapping]] = ...,
-        specification: _Optional[_Union[_basis_pb2.BasisSpecification, _Mapping]] = ...,
-    ) -> None: ...
+    def __init__(self, problem: _Optional[_Union[_problem_pb2.Problem, _Mapping]] = ..., specification: _Optional[_Union[_basis_pb2.BasisSpecification, _Mapping]] = ...) -> None: ...
 
 class CheckResponse(_message.Message):
-    __slots__ = (
-        "problem_digest",
-        "basis_key",
-        "algorithm_version",
-        "api_version",
-        "specification",
-        "ends",
-        "scale",
-        "cached",
-        "cost",
-        "remarks",
-    )
+    __slots__ = ("problem_digest", "basis_key", "algorithm_version", "api_version", "specification", "ends", "scale", "cached", "cost", "remarks")
     PROBLEM_DIGEST_FIELD_NUMBER: _ClassVar[int]
     BASIS_KEY_FIELD_NUMBER: _ClassVar[int]
     ALGORITHM_VERSION_FIELD_NUMBER: _ClassVar[int]
@@ -66,19 +50,7 @@ class CheckResponse(_message.Message):
     cached: bool
     cost: CostEstimate
     remarks: _containers.RepeatedScalarFieldContainer[str]
-    def __init__(
-        self,
-        problem_digest: _Optional[str] = ...,
-        basis_key: _Optional[str] = ...,
-        algorithm_version: _Optional[str] = ...,
-        api_version: _Optional[str] = ...,
-        specification: _Optional[_Union[_basis_pb2.ResolvedSpecification, _Mapping]] = ...,
-        ends: _Optional[_Union[_basis_pb2.Ends, _Mapping]] = ...,
-        scale: _Optional[float] = ...,
-        cached: bool = ...,
-        cost: _Optional[_Union[CostEstimate, _Mapping]] = ...,
-        remarks: _Optional[_Iterable[str]] = ...,
-    ) -> None: ...
+    def __init__(self, problem_digest: _Optional[str] = ..., basis_key: _Optional[str] = ..., algorithm_version: _Optional[str] = ..., api_version: _Optional[str] = ..., specification: _Optional[_Union[_basis_pb2.ResolvedSpecification, _Mapping]] = ..., ends: _Optional[_Union[_basis_pb2.Ends, _Mapping]] = ..., scale: _Optional[float] = ..., cached: bool = ..., cost: _Optional[_Union[CostEstimate, _Mapping]] = ..., remarks: _Optional[_Iterable[str]] = ...) -> None: ...
 
 class CostEstimate(_message.Message):
     __slots__ = ("pieces", "unknowns", "seconds")
@@ -88,9 +60,7 @@ class CostEstimate(_message.Message):
     pieces: int
     unknowns: int
     seconds: float
-    def __init__(
-        self, pieces: _Optional[int] = ..., unknowns: _Optional[int] = ..., seconds: _Optional[float] = ...
-    ) -> None: ...
+    def __init__(self, pieces: _Optional[int] = ..., unknowns: _Optional[int] = ..., seconds: _Optional[float] = ...) -> None: ...
 
 class SolveRequest(_message.Message):
     __slots__ = ("problem", "specification")
@@ -98,33 +68,10 @@ class SolveRequest(_message.Message):
     SPECIFICATION_FIELD_NUMBER: _ClassVar[int]
     problem: _problem_pb2.Problem
     specification: _basis_pb2.BasisSpecification
-    def __init__(
-        self,
-        problem: _Optional[_Union[_problem_pb2.Problem, _Mapping]] = ...,
-        specification: _Optional[_Union[_basis_pb2.BasisSpecification, _Mapping]] = ...,
-    ) -> None: ...
+    def __init__(self, problem: _Optional[_Union[_problem_pb2.Problem, _Mapping]] = ..., specification: _Optional[_Union[_basis_pb2.BasisSpecification, _Mapping]] = ...) -> None: ...
 
 class SolveResponse(_message.Message):
-    __slots__ = (
-        "basis_key",
-        "problem_digest",
-        "algorithm_version",
-        "api_version",
-        "specification",
-        "eigenvalues",
-        "lower",
-        "upper",
-        "zeros",
-        "groups",
-        "confirmed",
-        "scale",
-        "ends",
-        "answered_from_cache",
-        "server_solve_count",
-        "solve_seconds",
-        "remarks",
-        "tolerance_met",
-    )
+    __slots__ = ("basis_key", "problem_digest", "algorithm_version", "api_version", "specification", "eigenvalues", "lower", "upper", "zeros", "groups", "confirmed", "scale", "ends", "answered_from_cache", "server_solve_count", "solve_seconds", "remarks", "tolerance_met")
     BASIS_KEY_FIELD_NUMBER: _ClassVar[int]
     PROBLEM_DIGEST_FIELD_NUMBER: _ClassVar[int]
     ALGORITHM_VERSION_FIELD_NUMBER: _ClassVar[int]
@@ -161,27 +108,7 @@ class SolveResponse(_message.Message):
     solve_seconds: float
     remarks: _containers.RepeatedScalarFieldContainer[str]
     tolerance_met: _containers.RepeatedScalarFieldContainer[bool]
-    def __init__(
-        self,
-        basis_key: _Optional[str] = ...,
-        problem_digest: _Optional[str] = ...,
-        algorithm_version: _Optional[str] = ...,
-        api_version: _Optional[str] = ...,
-        specification: _Optional[_Union[_basis_pb2.ResolvedSpecification, _Mapping]] = ...,
-        eigenvalues: _Optional[_Iterable[float]] = ...,
-        lower: _Optional[_Iterable[float]] = ...,
-        upper: _Optional[_Iterable[float]] = ...,
-        zeros: _Optional[_Iterable[int]] = ...,
-        groups: _Optional[_Iterable[int]] = ...,
-        confirmed: _Optional[_Iterable[_Union[_basis_pb2.CountConfirmation, str]]] = ...,
-        scale: _Optional[float] = ...,
-        ends: _Optional[_Union[_basis_pb2.Ends, _Mapping]] = ...,
-        answered_from_cache: bool = ...,
-        server_solve_count: _Optional[int] = ...,
-        solve_seconds: _Optional[float] = ...,
-        remarks: _Optional[_Iterable[str]] = ...,
-        tolerance_met: _Optional[_Iterable[bool]] = ...,
-    ) -> None: ...
+    def __init__(self, basis_key: _Optional[str] = ..., problem_digest: _Optional[str] = ..., algorithm_version: _Optional[str] = ..., api_version: _Optional[str] = ..., specification: _Optional[_Union[_basis_pb2.ResolvedSpecification, _Mapping]] = ..., eigenvalues: _Optional[_Iterable[float]] = ..., lower: _Optional[_Iterable[float]] = ..., upper: _Optional[_Iterable[float]] = ..., zeros: _Optional[_Iterable[int]] = ..., groups: _Optional[_Iterable[int]] = ..., confirmed: _Optional[_Iterable[_Union[_basis_pb2.CountConfirmation, str]]] = ..., scale: _Optional[float] = ..., ends: _Optional[_Union[_basis_pb2.Ends, _Mapping]] = ..., answered_from_cache: bool = ..., server_solve_count: _Optional[int] = ..., solve_seconds: _Optional[float] = ..., remarks: _Optional[_Iterable[str]] = ..., tolerance_met: _Optional[_Iterable[bool]] = ...) -> None: ...
 
 class WatchSolveRequest(_message.Message):
     __slots__ = ("problem", "specification", "interval_seconds")
@@ -191,12 +118,7 @@ class WatchSolveRequest(_message.Message):
     problem: _problem_pb2.Problem
     specification: _basis_pb2.BasisSpecification
     interval_seconds: float
-    def __init__(
-        self,
-        problem: _Optional[_Union[_problem_pb2.Problem, _Mapping]] = ...,
-        specification: _Optional[_Union[_basis_pb2.BasisSpecification, _Mapping]] = ...,
-        interval_seconds: _Optional[float] = ...,
-    ) -> None: ...
+    def __init__(self, problem: _Optional[_Union[_problem_pb2.Problem, _Mapping]] = ..., specification: _Optional[_Union[_basis_pb2.BasisSpecification, _Mapping]] = ..., interval_seconds: _Optional[float] = ...) -> None: ...
 
 class WatchSolveResponse(_message.Message):
     __slots__ = ("progress", "answer")
@@ -204,11 +126,7 @@ class WatchSolveResponse(_message.Message):
     ANSWER_FIELD_NUMBER: _ClassVar[int]
     progress: SolveProgress
     answer: SolveResponse
-    def __init__(
-        self,
-        progress: _Optional[_Union[SolveProgress, _Mapping]] = ...,
-        answer: _Optional[_Union[SolveResponse, _Mapping]] = ...,
-    ) -> None: ...
+    def __init__(self, progress: _Optional[_Union[SolveProgress, _Mapping]] = ..., answer: _Optional[_Union[SolveResponse, _Mapping]] = ...) -> None: ...
 
 class SolveProgress(_message.Message):
     __slots__ = ("stage", "queue_position", "elapsed_seconds", "steps")
@@ -220,13 +138,7 @@ class SolveProgress(_message.Message):
     queue_position: int
     elapsed_seconds: float
     steps: int
-    def __init__(
-        self,
-        stage: _Optional[_Union[SolveStage, str]] = ...,
-        queue_position: _Optional[int] = ...,
-        elapsed_seconds: _Optional[float] = ...,
-        steps: _Optional[int] = ...,
-    ) -> None: ...
+    def __init__(self, stage: _Optional[_Union[SolveStage, str]] = ..., queue_position: _Optional[int] = ..., elapsed_seconds: _Optional[float] = ..., steps: _Optional[int] = ...) -> None: ...
 
 class FetchBasisRequest(_message.Message):
     __slots__ = ("basis", "offset")
@@ -234,11 +146,7 @@ class FetchBasisRequest(_message.Message):
     OFFSET_FIELD_NUMBER: _ClassVar[int]
     basis: _basis_pb2.BasisReference
     offset: int
-    def __init__(
-        self,
-        basis: _Optional[_Union[_basis_pb2.BasisReference, _Mapping]] = ...,
-        offset: _Optional[int] = ...,
-    ) -> None: ...
+    def __init__(self, basis: _Optional[_Union[_basis_pb2.BasisReference, _Mapping]] = ..., offset: _Optional[int] = ...) -> None: ...
 
 class FetchBasisResponse(_message.Message):
     __slots__ = ("data", "offset", "total_size", "basis_key", "algorithm_version", "api_version")
@@ -254,12 +162,4 @@ class FetchBasisResponse(_message.Message):
     basis_key: str
     algorithm_version: str
     api_version: str
-    def __init__(
-        self,
-        data: _Optional[bytes] = ...,
-        offset: _Optional[int] = ...,
-        total_size: _Optional[int] = ...,
-        basis_key: _Optional[str] = ...,
-        algorithm_version: _Optional[str] = ...,
-        api_version: _Optional[str] = ...,
-    ) -> None: ...
+    def __init__(self, data: _Optional[bytes] = ..., offset: _Optional[int] = ..., total_size: _Optional[int] = ..., basis_key: _Optional[str] = ..., algorithm_version: _Optional[str] = ..., api_version: _Optional[str] = ...) -> None: ...
