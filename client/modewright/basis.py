@@ -29,6 +29,7 @@ if TYPE_CHECKING:
 __all__ = ["Basis", "Projection", "load_basis"]
 
 _SHOWN_KEY = 12
+_PER_MODE = ("eigenvalues", "lower", "upper", "zeros", "groups", "confirmed", "tolerance_met")
 
 
 class Basis:
@@ -37,7 +38,10 @@ class Basis:
     eigenvalues, lower, upper: (N,) ascending, lower <= lambda <= upper; bounds are computed in floating
     point with a margin for rounding, not by interval arithmetic. zeros: (N,) interior zeros of each mode.
     groups: (N,) modes with the same number cannot be told apart. confirmed: (N,) whether a comparison
-    problem confirms the index; elsewhere the lower bound rests on the count of the discretised problem.
+    problem confirms the index; elsewhere it is the count of the discretised problem, and the lower bound may
+    be far below. tolerance_met: (N,) whether upper - lower is at most rtol times max(abs(lambda), scale);
+    where it is not, rounding or coefficients that vary too fast do not allow it: the bounds hold, but are as
+    wide as they are.
     key: names the basis; equal keys mean equal numbers, and coefficients belong to a key. count: N. rtol:
     what it was solved for. scale: accuracies are relative to max(abs(lambda), scale). ends: the two ends as
     solved.
@@ -67,7 +71,7 @@ class Basis:
             self._take_record(record)
         else:
             raise TypeError("a basis is made from an answer or from a record")
-        for name in ("eigenvalues", "lower", "upper", "zeros", "groups", "confirmed"):
+        for name in _PER_MODE:
             getattr(self, name).flags.writeable = False
 
     def _take_answer(self, answer: solve_pb2.SolveResponse) -> None:
@@ -77,6 +81,7 @@ class Basis:
         self.zeros = np.array(answer.zeros, dtype=np.int64)
         self.groups = np.array(answer.groups, dtype=np.int64)
         self.confirmed = np.array(answer.confirmed) == basis_pb2.COUNT_CONFIRMATION_COMPARISON
+        self.tolerance_met = np.array(answer.tolerance_met, dtype=np.bool_)
         self.key = answer.basis_key
         self.problem_digest = answer.problem_digest
         self.algorithm_version = answer.algorithm_version
@@ -93,6 +98,7 @@ class Basis:
         for name in ("eigenvalues", "lower", "upper", "zeros", "groups"):
             setattr(self, name, getattr(record, name).copy())
         self.confirmed = record.confirmed == 1
+        self.tolerance_met = record.tolerance_met
         self.key = record.basis_key
         self.problem_digest = record.problem_digest
         self.algorithm_version = record.algorithm_version
@@ -107,11 +113,10 @@ class Basis:
         cls, service: Service, problem: Problem, modes: int, answer: solve_pb2.SolveResponse
     ) -> Self:
         """The handle for an answer, cut to the `modes` asked for. Raises InternalError if there are fewer."""
-        arrays = ("eigenvalues", "lower", "upper", "zeros", "groups", "confirmed")
-        sizes = {name: len(getattr(answer, name)) for name in arrays}
+        sizes = {name: len(getattr(answer, name)) for name in _PER_MODE}
         if min(sizes.values()) < modes:
             raise errors.InternalError(f"{modes} modes were asked for, the answer holds {sizes}")
-        for name in arrays:
+        for name in _PER_MODE:
             del getattr(answer, name)[modes:]
         return cls(service, problem, answer)
 

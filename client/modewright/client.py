@@ -77,7 +77,9 @@ class Check:
 
 @dataclass(frozen=True)
 class Progress:
-    """How far a solve is. stage: "queued" or "computing"; steps: signs of life of the solver."""
+    """How far a solve is. stage: "starting" while the service has no worker that is ready, "queued" while it
+    waits for one, "computing"; steps: signs of life of the solver.
+    """
 
     stage: str
     queue_position: int

@@ -7,8 +7,9 @@ Its life:
   end of the process.
 - A socket pair joins parent and child. The child writes one line of JSON with its address when it is ready,
   and exits when its side reads the end of file: a parent that is killed takes its service along.
-- The socket and the log lie in a folder that only this user may enter. The folder goes with the service; what
-  a killed parent leaves is swept up by the next start.
+- The socket and the log lie in a folder that only this user may enter. The folder goes with the service: the
+  parent removes it, and the child does when it reads the end of file. What is left where both were killed is
+  swept up by a later start.
 - A forked child of this process goes on using its parent's service, through a channel of its own, as long as
   that answers, and otherwise starts one itself. Only the process that started a service stops it.
 """
@@ -84,7 +85,8 @@ class Running:
     def _spawn(self, theirs: socket.socket, log: int) -> subprocess.Popen[bytes]:
         path = self.folder / _SOCKET
         command = [sys.executable, "-m", _MODULE, "--embedded", "--ready-fd", str(theirs.fileno())]
-        command += ["--socket", str(path), "--workers", str(self.options.workers)]
+        command += ["--socket", str(path), "--folder", str(self.folder)]
+        command += ["--workers", str(self.options.workers)]
         # A session of its own: Ctrl-C at a terminal interrupts the caller, which decides about its service.
         return subprocess.Popen(
             command,
@@ -183,7 +185,9 @@ def _private_folder() -> Path:
 
 
 def _sweep(own: Path) -> None:
-    """Removes what killed parents left behind beside `own`: old folders of this user without a server."""
+    """Removes what parents and services that were killed together left behind beside `own`: old folders of
+    this user without a server.
+    """
     for folder in own.parent.glob(f"{_PREFIX}*"):
         with contextlib.suppress(OSError):
             found = folder.lstat()

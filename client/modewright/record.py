@@ -207,6 +207,12 @@ class Record:
         return int(self.eigenvalues.size)
 
     @property
+    def tolerance_met(self) -> NDArray[np.bool_]:
+        """(N,) whether upper - lower is no more than rtol max(|lambda|, scale)."""
+        size = np.maximum(np.abs(self.eigenvalues), self.scale)
+        return np.asarray(self.upper - self.lower <= self.rtol * size)
+
+    @property
     def elements(self) -> int:
         """Number of elements."""
         return int(self.edges.size - 1)

@@ -10,6 +10,7 @@ import argparse
 import os
 import sys
 from collections.abc import Sequence
+from pathlib import Path
 from typing import Final
 
 from modewright_service import __version__
@@ -37,6 +38,9 @@ def _parser() -> argparse.ArgumentParser:
         "--ready-fd", type=int, metavar="FD", help="inherited socket or pipe for the ready line"
     )
     embedded.add_argument("--socket", metavar="PATH", help="path of the Unix socket")
+    embedded.add_argument(
+        "--folder", metavar="PATH", help="folder of this service alone, removed when the parent is gone"
+    )
     probe = parser.add_argument_group("probe")
     probe.add_argument(
         "--probe", metavar="ADDRESS", help="ask the service there for its health; exit status 0 or 1"
@@ -59,16 +63,20 @@ def main(arguments: Sequence[str] | None = None) -> int:
         if flags.embedded:
             if flags.ready_fd is None or not flags.socket:
                 parser.error("--embedded needs --ready-fd and --socket")
+            try:
+                os.fstat(flags.ready_fd)
+            except OSError:
+                parser.error(f"--ready-fd: {flags.ready_fd} is not open")
             # The parent's environment may be meant for a service it runs elsewhere: only flags count here.
             settings = parse(flags, {}, listen=f"unix:{flags.socket}", **_EMBEDDED)
-            return _run(settings, flags.ready_fd)
-        return _run(parse(flags, os.environ), None)
+            return _run(settings, flags.ready_fd, Path(flags.folder) if flags.folder else None)
+        return _run(parse(flags, os.environ))
     except SettingsError as error:
         print(f"modewright-service: {error}", file=sys.stderr)
         return 2
 
 
-def _run(settings: Settings, ready_fd: int | None) -> int:
+def _run(settings: Settings, ready_fd: int | None = None, folder: Path | None = None) -> int:
     from modewright_service.process import logs
     from modewright_service.process.crew import hire
     from modewright_service.process.spawn import SINGLE_THREADED
@@ -83,7 +91,7 @@ def _run(settings: Settings, ready_fd: int | None) -> int:
 
     from modewright_service.process.lifecycle import serve
 
-    asyncio.run(serve(settings, crew, ready_fd))
+    asyncio.run(serve(settings, crew, ready_fd, folder))
     return 0
 
 

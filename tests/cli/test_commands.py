@@ -91,7 +91,7 @@ def test_solve_to_csv(run: Any, document: Path, tmp_path: Path) -> None:
     out = tmp_path / "basis.csv"
     run("solve", document, "--modes", MODES, "-o", out)
     lines = out.read_text(encoding="utf-8").splitlines()
-    assert lines[0] == "n,eigenvalues,lower,upper,zeros,groups"
+    assert lines[0] == "n,eigenvalues,lower,upper,zeros,groups,tolerance_met"
     table = np.array([[float(cell) for cell in line.split(",")] for line in lines[1:]])
     np.testing.assert_allclose(table[:, 1], EIGENVALUES, rtol=1e-9)
 

@@ -73,6 +73,7 @@ def answer(modes: int, **changes: Any) -> solve_pb2.SolveResponse:
         "zeros": range(modes),
         "groups": range(modes),
         "confirmed": [basis_pb2.COUNT_CONFIRMATION_COMPARISON] * modes,
+        "tolerance_met": [True] * modes,
         "scale": 1.0,
     }
     return solve_pb2.SolveResponse(**{**fields, **changes})

@@ -48,7 +48,7 @@ def test_exactly_the_modes_asked_for_come_back(script: Script, service: modewrig
     script.steps = [lambda request, context: answer(8)]
     basis = service.solve(PROBLEM, modes=5)
     assert basis.count == len(basis) == 5
-    for name in ("eigenvalues", "lower", "upper", "zeros", "groups", "confirmed"):
+    for name in ("eigenvalues", "lower", "upper", "zeros", "groups", "confirmed", "tolerance_met"):
         array = getattr(basis, name)
         assert array.shape == (5,)
         assert not array.flags.writeable

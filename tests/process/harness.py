@@ -35,30 +35,46 @@ NO_RETRIES = [("grpc.enable_retries", 0), ("grpc.max_receive_message_length", 16
 class Running:
     """A service on a loop of its own in a thread of this process, with a channel to it.
 
-    credentials: of the channel, for a service with TLS.
+    credentials: of the channel, for a service with TLS. entry: "module:function" that workers solve with.
     """
 
     def __init__(
         self, folder: Path, credentials: grpc.ChannelCredentials | None = None, **settings: Any
     ) -> None:
         listen = settings.pop("listen", f"unix:{folder / 'service.sock'}")
+        self._entry = settings.pop("entry", "")
         given = {"workers": 1, "worker_nice": 0, "drain_seconds": 0.0, "grace_seconds": 5.0, **settings}
         self.settings = Settings(listen=listen, spool=folder / "spool", **given)
         self._loop = asyncio.new_event_loop()
         self._thread = threading.Thread(target=self._loop.run_forever)
         self._thread.start()
-        self.service: Service = self.run(self._start())
-        if credentials is None:
-            self.channel = grpc.insecure_channel(self.address, NO_RETRIES)
-        else:
-            self.channel = grpc.secure_channel(self.address, credentials, NO_RETRIES)
-        self.stub = EigenbasisServiceStub(self.channel)
-        until(lambda: len(self.service.pool.pids) == self.settings.slots)
+        try:
+            self.service: Service = self.run(self._create())
+            self.address = self.run(self.service.start())
+            if credentials is None:
+                self.channel = grpc.insecure_channel(self.address, NO_RETRIES)
+            else:
+                self.channel = grpc.secure_channel(self.address, credentials, NO_RETRIES)
+            self.stub = EigenbasisServiceStub(self.channel)
+            until(lambda: len(self.service.pool.pids) == self.settings.slots)
+        except BaseException:
+            self.close()
+            raise
 
-    async def _start(self) -> Service:
-        service = Service(self.settings, hire(self.settings))
-        self.address = await service.start()
-        return service
+    async def _create(self) -> Service:
+        self._crew = hire(self.settings, self._entry)
+        return Service(self.settings, self._crew)
+
+    def mid_solve(self) -> int:
+        """Wait until the worker of the first slot is in the midst of a solve; its process id."""
+        found: list[int] = []
+
+        def polling() -> bool:
+            found[:] = self.service.pool.busy_pids
+            return bool(found) and self._crew.board.steps(0) > 0
+
+        until(polling)
+        return found[0]
 
     def run(self, work: Coroutine[Any, Any, T]) -> T:
         """The outcome of a coroutine on the service's loop."""
@@ -69,11 +85,15 @@ class Running:
         return asyncio.run_coroutine_threadsafe(work, self._loop)
 
     def close(self) -> None:
-        self.channel.close()
-        self.run(self.service.stop(0.0))
-        self._loop.call_soon_threadsafe(self._loop.stop)
-        self._thread.join()
-        self._loop.close()
+        if hasattr(self, "channel"):  # its start did not fail
+            self.channel.close()
+        try:
+            if hasattr(self, "service"):
+                self.run(self.service.stop(0.0))
+        finally:
+            self._loop.call_soon_threadsafe(self._loop.stop)
+            self._thread.join()
+            self._loop.close()
 
 
 @contextlib.contextmanager

@@ -19,7 +19,7 @@ from modewright_service.process.crew import hire
 from modewright_service.process.pool import PoolLimits, WorkerPool
 from modewright_service.process.settings import Settings
 from modewright_service.store.counters import Counters
-from modewright_service.store.orders import Computed, Order
+from modewright_service.store.orders import Computed, Order, Progress
 from tests.process.harness import HEAVY, alive
 
 PATIENCE = 100.0
@@ -116,6 +116,28 @@ def test_a_solve_that_loses_two_workers_is_given_up(tmp_path: Path) -> None:
             # And the slot works again.
             assert len(eigenvalues(await workers.solve(order()))) == 8
             assert counters.worker_restarts == 2
+
+    run(test)
+
+
+def test_before_the_first_worker_is_ready_an_order_is_starting(tmp_path: Path) -> None:
+    async def test() -> None:
+        crew = hire(Settings(workers=1, worker_nice=0, spool=tmp_path / "spool"))
+        workers = WorkerPool(crew.setup, crew.board, crew.spool, 1, Counters(), spawned=crew.spawned)
+        workers.start()
+        first, second = heavy(), order()
+        tasks = [asyncio.ensure_future(workers.solve(o)) for o in (first, second)]
+        await asyncio.sleep(0)
+        # Nothing has been read from the worker: this task has not let go of the loop for long enough.
+        assert workers.progress(first) == Progress(computing=False, position=0, starting=True)
+        assert workers.progress(second) == Progress(computing=False, position=1, starting=True)
+        await computing(workers, first)
+        assert workers.progress(second) == Progress(computing=False, position=0, starting=False)
+        tasks[0].cancel()
+        assert len(eigenvalues(await tasks[1])) == 8
+        await workers.close()
+        crew.board.close()
+        crew.spool.close()
 
     run(test)
 

@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import os
 import signal
+import socket
 import subprocess
 import sys
 import threading
 import urllib.request
 from collections.abc import Iterator
 from concurrent.futures import ThreadPoolExecutor
+from dataclasses import fields
 from pathlib import Path
 
 import grpc
@@ -18,11 +20,14 @@ from grpc_health.v1 import health_pb2, health_pb2_grpc
 
 from modewright.v1 import basis_pb2, solve_pb2
 from modewright_service import __version__
+from modewright_service.__main__ import main
 from modewright_service.process.lifecycle import SERVICE_NAME
 from modewright_service.process.probe import probe
+from modewright_service.process.settings import Settings
 from tests.process.harness import (
     NO_RETRIES,
     PATIENCE,
+    Running,
     alive,
     child,
     heavy_request,
@@ -116,18 +121,44 @@ def test_two_cold_processes_give_identical_bytes(tmp_path: Path) -> None:
 # ---- the command ----
 
 
-def test_a_setting_that_cannot_be_used_ends_the_command(tmp_path: Path) -> None:
-    command = [sys.executable, "-m", "modewright_service"]
-    environment = {**os.environ, "MODEWRIGHT_QUEUE": "many"}
-    done = subprocess.run(command, env=environment, capture_output=True, text=True, timeout=PATIENCE)
-    assert done.returncode == 2
-    assert "MODEWRIGHT_QUEUE" in done.stderr
-    assert "many" in done.stderr
-    # A port that another process has.
-    listen = ["--listen", "127.0.0.1:1x", "--workers", "1", "--spool", str(tmp_path / "spool")]
-    done = subprocess.run([*command, *listen], capture_output=True, text=True, timeout=PATIENCE)
-    assert done.returncode == 2
-    assert "127.0.0.1:1x" in done.stderr
+def _refused(*arguments: str, **environment: str) -> str:
+    """What the command says about settings that it cannot use."""
+    command = [sys.executable, "-m", "modewright_service", *arguments]
+    done = subprocess.run(
+        command, env={**os.environ, **environment}, capture_output=True, text=True, timeout=PATIENCE
+    )
+    assert done.returncode == 2, done.stderr
+    assert "Traceback" not in done.stderr
+    return done.stderr
+
+
+def test_a_setting_that_cannot_be_used_ends_the_command_in_words(tmp_path: Path) -> None:
+    assert "MODEWRIGHT_QUEUE: 'many' is not a whole number" in _refused(MODEWRIGHT_QUEUE="many")
+    assert "--ready-fd: 77 is not open" in _refused("--embedded", "--ready-fd", "77", "--socket", "s")
+    spool = ["--workers", "1", "--spool", str(tmp_path / "spool")]
+    (tmp_path / "file").touch()
+    assert "spool" in _refused("--spool", str(tmp_path / "file"))
+    absent = str(tmp_path / "absent.pem")
+    assert absent in _refused(*spool, "--tls-certificate", absent, "--tls-key", absent)
+    with socket.create_server(("127.0.0.1", 0)) as taken:
+        address = f"127.0.0.1:{taken.getsockname()[1]}"
+        said = _refused(*spool, "--listen", address)
+        assert "listen" in said
+        assert address in said
+        listen = ["--listen", f"unix:{tmp_path / 's'}"]
+        assert f"metrics: '{address}'" in _refused(*spool, *listen, "--metrics", address)
+    # Nothing is left behind, of a service that had begun to start either.
+    assert list((tmp_path / "spool").glob("front-*")) == []
+
+
+def test_help_lists_every_setting_with_its_variable(capsys: pytest.CaptureFixture[str]) -> None:
+    with pytest.raises(SystemExit) as ended:
+        main(["--help"])
+    assert ended.value.code == 0
+    said = " ".join(capsys.readouterr().out.split())
+    for item in fields(Settings):
+        assert f"--{item.name.replace('_', '-')}" in said
+        assert f"MODEWRIGHT_{item.name.upper()})" in said
 
 
 def test_the_probe_of_nobody_fails(tmp_path: Path) -> None:
@@ -135,6 +166,7 @@ def test_the_probe_of_nobody_fails(tmp_path: Path) -> None:
     done = subprocess.run(command, capture_output=True, text=True, timeout=PATIENCE)
     assert done.returncode == 1
     assert "UNAVAILABLE" in done.stderr
+    assert probe("localhost:1", ca=str(tmp_path / "absent.pem")) == 1
 
 
 def test_sigterm_drains_before_it_stops(tmp_path: Path) -> None:
@@ -165,6 +197,17 @@ def test_sigterm_drains_before_it_stops(tmp_path: Path) -> None:
 # ---- in this process ----
 
 
+def _metrics(live: Running) -> dict[str, float]:
+    """What a scrape sees: by name with labels."""
+    url = f"http://127.0.0.1:{live.service.metrics_port}/metrics"
+    with urllib.request.urlopen(url, timeout=PATIENCE) as answer:
+        lines = answer.read().decode().splitlines()
+    return {
+        name: float(value)
+        for name, value in (line.rsplit(" ", 1) for line in lines if not line.startswith("#"))
+    }
+
+
 def test_what_is_left_at_the_end_of_the_grace_period_is_unavailable(tmp_path: Path) -> None:
     with running(tmp_path, grace_seconds=0.1) as live:
         watching = live.stub.WatchSolve(
@@ -183,12 +226,22 @@ def test_what_is_left_at_the_end_of_the_grace_period_is_unavailable(tmp_path: Pa
 
 
 def test_200_concurrent_equal_requests_solve_once(tmp_path: Path) -> None:
-    with running(tmp_path) as live:
+    with running(tmp_path, metrics="127.0.0.1:0") as live:
         calls = [live.stub.Solve.future(solve_request(w=3.0, count=16)) for _ in range(200)]
         answers = [call.result(PATIENCE) for call in calls]
         assert live.service.counters.solves_finished == 1
         assert [answer.answered_from_cache for answer in answers].count(False) == 1
         assert len({tuple(answer.eigenvalues) for answer in answers}) == 1
+        assert {answer.server_solve_count for answer in answers} == {1}
+        seen = _metrics(live)
+        assert seen["modewright_solves_started_total"] == seen["modewright_solves_finished_total"] == 1
+        assert seen["modewright_solve_joins_total"] + seen["modewright_cache_hits_total"] == 199
+        # And an equal one, and one for fewer modes, are answered without a solve.
+        for count in (16, 3):
+            assert live.stub.Solve(solve_request(w=3.0, count=count)).answered_from_cache
+        seen = _metrics(live)
+        assert seen["modewright_solves_started_total"] == 1
+        assert seen['modewright_calls_total{method="Solve",status="OK"}'] == 202
 
 
 def test_a_caller_that_goes_away_stops_its_solve(tmp_path: Path) -> None:
@@ -232,18 +285,14 @@ def equipped(tmp_path_factory: pytest.TempPathFactory) -> Iterator[object]:
 def test_metrics_are_prometheus_text(equipped) -> None:
     equipped.stub.Solve(solve_request(w=5.0))
     equipped.stub.Solve(solve_request(w=5.0))
-    url = f"http://127.0.0.1:{equipped.service.metrics_port}/metrics"
-    with urllib.request.urlopen(url, timeout=PATIENCE) as answer:
-        lines = answer.read().decode().splitlines()
-    values = dict(line.rsplit(" ", 1) for line in lines if not line.startswith("#"))
-    counters = equipped.service.counters
-    assert float(values["modewright_solves_finished_total"]) == counters.solves_finished >= 1
-    assert float(values["modewright_cache_hits_total"]) == counters.cache_hits >= 1
-    assert float(values["modewright_workers_ready"]) == 1
-    assert float(values["modewright_serving"]) == 1
-    assert float(values['modewright_calls_total{method="Solve",status="OK"}']) >= 2
-    assert float(values['modewright_solve_seconds_bucket{le="+Inf"}']) == counters.solves_finished
-    assert float(values[f'modewright_info{{version="{__version__}"}}']) == 1
+    values, counters = _metrics(equipped), equipped.service.counters
+    assert values["modewright_solves_finished_total"] == counters.solves_finished >= 1
+    assert values["modewright_cache_hits_total"] == counters.cache_hits >= 1
+    assert values["modewright_workers_ready"] == 1
+    assert values["modewright_serving"] == 1
+    assert values['modewright_calls_total{method="Solve",status="OK"}'] >= 2
+    assert values['modewright_solve_seconds_bucket{le="+Inf"}'] == counters.solves_finished
+    assert values[f'modewright_info{{version="{__version__}"}}'] == 1
 
 
 def test_reflection_and_channelz_answer_when_switched_on(equipped) -> None:

@@ -128,6 +128,10 @@ def test_flags_win_over_the_environment_and_that_over_defaults() -> None:
         (["--tls-key", "key.pem"], {}, ["tls_certificate"]),
         (["--tls-client-ca", "ca.pem"], {}, ["tls_client_ca"]),
         (["--log-level", "loud"], {}, ["log_level", "loud"]),
+        (["--workers", "100000"], {}, ["workers", "100000"]),
+        (["--listen", "nowhere"], {}, ["listen", "nowhere"]),
+        ([], {"MODEWRIGHT_LISTEN": "localhost:99999"}, ["listen", "localhost:99999"]),
+        (["--metrics", "9100"], {}, ["metrics", "9100"]),
     ],
 )
 def test_settings_that_cannot_be_used(

@@ -36,10 +36,14 @@ def _solve(
     _log.info("%s: %r", options.document, problem)
 
     def report(progress: modewright.Progress) -> None:
-        _log.info("%s for %.1f s", progress.stage, progress.elapsed_seconds)
+        _log.info(
+            "%s, %.1f s, %d steps of the solver", progress.stage, progress.elapsed_seconds, progress.steps
+        )
 
     basis = service.solve(problem, modes, rtol=rtol, progress=report if options.verbose else None)
     _log.info("basis %s, %d modes", basis.key, len(basis.eigenvalues))
+    for remark in basis.remarks:
+        _log.warning("%s", remark)
     return basis
 
 
@@ -76,6 +80,7 @@ def solve(options: argparse.Namespace) -> dict[str, Any]:
             "upper": basis.upper,
             "zeros": basis.zeros,
             "groups": basis.groups,
+            "tolerance_met": basis.tolerance_met.astype(np.int64),
         }
         if target is not None and target.suffix.lower() == ".csv":
             write_table(target, ("n", *columns), (np.arange(len(basis.eigenvalues)), *columns.values()))
@@ -94,7 +99,9 @@ def solve(options: argparse.Namespace) -> dict[str, Any]:
     return {
         **_about("solve", options, basis),
         **{name: np.asarray(values).tolist() for name, values in columns.items()},
+        "tolerance_met": basis.tolerance_met.tolist(),
         "confirmed": basis.confirmed.tolist(),
+        "remarks": list(basis.remarks),
         "scale": basis.scale,
         "answered_from_cache": basis.answered_from_cache,
         "server_solve_count": basis.server_solve_count,

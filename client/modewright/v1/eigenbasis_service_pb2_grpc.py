@@ -142,8 +142,8 @@ class EigenbasisServiceServicer(object):
     def Solve(self, request, context):
         """Computes the lowest eigenvalues with bounds, or answers from what was computed before. Concurrent
         equal requests share one computation. Fails with OUT_OF_RANGE (SPECTRUM_EXHAUSTED) rather than
-        return fewer than asked, and with FAILED_PRECONDITION (NOT_CONVERGED) if the tolerance is not
-        reached.
+        return fewer than asked, and with FAILED_PRECONDITION (NOT_CONVERGED) if an eigenvalue has no
+        finite bounds. Bounds wider than asked are answered, and tolerance_met says which they are.
         """
         context.set_code(grpc.StatusCode.UNIMPLEMENTED)
         context.set_details('Method not implemented!')

@@ -26,15 +26,15 @@ from modewright.v1 import basis_pb2 as modewright_dot_v1_dot_basis__pb2
 from modewright.v1 import problem_pb2 as modewright_dot_v1_dot_problem__pb2
 
 
-DESCRIPTOR = _descriptor_pool.Default().AddSerializedFile(b'\n\x19modewright/v1/solve.proto\x12\rmodewright.v1\x1a\x19modewright/v1/basis.proto\x1a\x1bmodewright/v1/problem.proto\"q\n\x0c\x43heckRequest\x12\'\n\x07problem\x18\x01 \x01(\x0b\x32\x16.modewright.v1.Problem\x12\x38\n\rspecification\x18\x02 \x01(\x0b\x32!.modewright.v1.BasisSpecification\"\xa5\x02\n\rCheckResponse\x12\x16\n\x0eproblem_digest\x18\x01 \x01(\t\x12\x11\n\tbasis_key\x18\x02 \x01(\t\x12\x19\n\x11\x61lgorithm_version\x18\x03 \x01(\t\x12\x13\n\x0b\x61pi_version\x18\x04 \x01(\t\x12;\n\rspecification\x18\x05 \x01(\x0b\x32$.modewright.v1.ResolvedSpecification\x12!\n\x04\x65nds\x18\x06 \x01(\x0b\x32\x13.modewright.v1.Ends\x12\r\n\x05scale\x18\x07 \x01(\x01\x12\x0e\n\x06\x63\x61\x63hed\x18\x08 \x01(\x08\x12)\n\x04\x63ost\x18\t \x01(\x0b\x32\x1b.modewright.v1.CostEstimate\x12\x0f\n\x07remarks\x18\n \x03(\t\"A\n\x0c\x43ostEstimate\x12\x0e\n\x06pieces\x18\x01 \x01(\x03\x12\x10\n\x08unknowns\x18\x02 \x01(\x03\x12\x0f\n\x07seconds\x18\x03 \x01(\x01\"q\n\x0cSolveRequest\x12\'\n\x07problem\x18\x01 \x01(\x0b\x32\x16.modewright.v1.Problem\x12\x38\n\rspecification\x18\x02 \x01(\x0b\x32!.modewright.v1.BasisSpecification\"\xc1\x03\n\rSolveResponse\x12\x11\n\tbasis_key\x18\x01 \x01(\t\x12\x16\n\x0eproblem_digest\x18\x02 \x01(\t\x12\x19\n\x11\x61lgorithm_version\x18\x03 \x01(\t\x12\x13\n\x0b\x61pi_version\x18\x04 \x01(\t\x12;\n\rspecification\x18\x05 \x01(\x0b\x32$.modewright.v1.ResolvedSpecification\x12\x13\n\x0b\x65igenvalues\x18\x06 \x03(\x01\x12\r\n\x05lower\x18\x07 \x03(\x01\x12\r\n\x05upper\x18\x08 \x03(\x01\x12\r\n\x05zeros\x18\t \x03(\x03\x12\x0e\n\x06groups\x18\n \x03(\x03\x12\x33\n\tconfirmed\x18\x0b \x03(\x0e\x32 .modewright.v1.CountConfirmation\x12\r\n\x05scale\x18\x0c \x01(\x01\x12!\n\x04\x65nds\x18\r \x01(\x0b\x32\x13.modewright.v1.Ends\x12\x1b\n\x13\x61nswered_from_cache\x18\x0e \x01(\x08\x12\x1a\n\x12server_solve_count\x18\x0f \x01(\x04\x12\x15\n\rsolve_seconds\x18\x10 \x01(\x01\x12\x0f\n\x07remarks\x18\x11 \x03(\t\"\x90\x01\n\x11WatchSolveRequest\x12\'\n\x07problem\x18\x01 \x01(\x0b\x32\x16.modewright.v1.Problem\x12\x38\n\rspecification\x18\x02 \x01(\x0b\x32!.modewright.v1.BasisSpecification\x12\x18\n\x10interval_seconds\x18\x03 \x01(\x01\"\x80\x01\n\x12WatchSolveResponse\x12\x30\n\x08progress\x18\x01 \x01(\x0b\x32\x1c.modewright.v1.SolveProgressH\x00\x12.\n\x06\x61nswer\x18\x02 \x01(\x0b\x32\x1c.modewright.v1.SolveResponseH\x00\x42\x08\n\x06update\"y\n\rSolveProgress\x12(\n\x05stage\x18\x01 \x01(\x0e\x32\x19.modewright.v1.SolveStage\x12\x16\n\x0equeue_position\x18\x02 \x01(\x03\x12\x17\n\x0f\x65lapsed_seconds\x18\x03 \x01(\x01\x12\r\n\x05steps\x18\x04 \x01(\x03\"Q\n\x11\x46\x65tchBasisRequest\x12,\n\x05\x62\x61sis\x18\x01 \x01(\x0b\x32\x1d.modewright.v1.BasisReference\x12\x0e\n\x06offset\x18\x02 \x01(\x04\"\x89\x01\n\x12\x46\x65tchBasisResponse\x12\x0c\n\x04\x64\x61ta\x18\x01 \x01(\x0c\x12\x0e\n\x06offset\x18\x02 \x01(\x04\x12\x12\n\ntotal_size\x18\x03 \x01(\x04\x12\x11\n\tbasis_key\x18\x04 \x01(\t\x12\x19\n\x11\x61lgorithm_version\x18\x05 \x01(\t\x12\x13\n\x0b\x61pi_version\x18\x06 \x01(\t*\\\n\nSolveStage\x12\x1b\n\x17SOLVE_STAGE_UNSPECIFIED\x10\x00\x12\x16\n\x12SOLVE_STAGE_QUEUED\x10\x01\x12\x19\n\x15SOLVE_STAGE_COMPUTING\x10\x02\x62\x06proto3')
+DESCRIPTOR = _descriptor_pool.Default().AddSerializedFile(b'\n\x19modewright/v1/solve.proto\x12\rmodewright.v1\x1a\x19modewright/v1/basis.proto\x1a\x1bmodewright/v1/problem.proto\"q\n\x0c\x43heckRequest\x12\'\n\x07problem\x18\x01 \x01(\x0b\x32\x16.modewright.v1.Problem\x12\x38\n\rspecification\x18\x02 \x01(\x0b\x32!.modewright.v1.BasisSpecification\"\xa5\x02\n\rCheckResponse\x12\x16\n\x0eproblem_digest\x18\x01 \x01(\t\x12\x11\n\tbasis_key\x18\x02 \x01(\t\x12\x19\n\x11\x61lgorithm_version\x18\x03 \x01(\t\x12\x13\n\x0b\x61pi_version\x18\x04 \x01(\t\x12;\n\rspecification\x18\x05 \x01(\x0b\x32$.modewright.v1.ResolvedSpecification\x12!\n\x04\x65nds\x18\x06 \x01(\x0b\x32\x13.modewright.v1.Ends\x12\r\n\x05scale\x18\x07 \x01(\x01\x12\x0e\n\x06\x63\x61\x63hed\x18\x08 \x01(\x08\x12)\n\x04\x63ost\x18\t \x01(\x0b\x32\x1b.modewright.v1.CostEstimate\x12\x0f\n\x07remarks\x18\n \x03(\t\"A\n\x0c\x43ostEstimate\x12\x0e\n\x06pieces\x18\x01 \x01(\x03\x12\x10\n\x08unknowns\x18\x02 \x01(\x03\x12\x0f\n\x07seconds\x18\x03 \x01(\x01\"q\n\x0cSolveRequest\x12\'\n\x07problem\x18\x01 \x01(\x0b\x32\x16.modewright.v1.Problem\x12\x38\n\rspecification\x18\x02 \x01(\x0b\x32!.modewright.v1.BasisSpecification\"\xd8\x03\n\rSolveResponse\x12\x11\n\tbasis_key\x18\x01 \x01(\t\x12\x16\n\x0eproblem_digest\x18\x02 \x01(\t\x12\x19\n\x11\x61lgorithm_version\x18\x03 \x01(\t\x12\x13\n\x0b\x61pi_version\x18\x04 \x01(\t\x12;\n\rspecification\x18\x05 \x01(\x0b\x32$.modewright.v1.ResolvedSpecification\x12\x13\n\x0b\x65igenvalues\x18\x06 \x03(\x01\x12\r\n\x05lower\x18\x07 \x03(\x01\x12\r\n\x05upper\x18\x08 \x03(\x01\x12\r\n\x05zeros\x18\t \x03(\x03\x12\x0e\n\x06groups\x18\n \x03(\x03\x12\x33\n\tconfirmed\x18\x0b \x03(\x0e\x32 .modewright.v1.CountConfirmation\x12\r\n\x05scale\x18\x0c \x01(\x01\x12!\n\x04\x65nds\x18\r \x01(\x0b\x32\x13.modewright.v1.Ends\x12\x1b\n\x13\x61nswered_from_cache\x18\x0e \x01(\x08\x12\x1a\n\x12server_solve_count\x18\x0f \x01(\x04\x12\x15\n\rsolve_seconds\x18\x10 \x01(\x01\x12\x0f\n\x07remarks\x18\x11 \x03(\t\x12\x15\n\rtolerance_met\x18\x12 \x03(\x08\"\x90\x01\n\x11WatchSolveRequest\x12\'\n\x07problem\x18\x01 \x01(\x0b\x32\x16.modewright.v1.Problem\x12\x38\n\rspecification\x18\x02 \x01(\x0b\x32!.modewright.v1.BasisSpecification\x12\x18\n\x10interval_seconds\x18\x03 \x01(\x01\"\x80\x01\n\x12WatchSolveResponse\x12\x30\n\x08progress\x18\x01 \x01(\x0b\x32\x1c.modewright.v1.SolveProgressH\x00\x12.\n\x06\x61nswer\x18\x02 \x01(\x0b\x32\x1c.modewright.v1.SolveResponseH\x00\x42\x08\n\x06update\"y\n\rSolveProgress\x12(\n\x05stage\x18\x01 \x01(\x0e\x32\x19.modewright.v1.SolveStage\x12\x16\n\x0equeue_position\x18\x02 \x01(\x03\x12\x17\n\x0f\x65lapsed_seconds\x18\x03 \x01(\x01\x12\r\n\x05steps\x18\x04 \x01(\x03\"Q\n\x11\x46\x65tchBasisRequest\x12,\n\x05\x62\x61sis\x18\x01 \x01(\x0b\x32\x1d.modewright.v1.BasisReference\x12\x0e\n\x06offset\x18\x02 \x01(\x04\"\x89\x01\n\x12\x46\x65tchBasisResponse\x12\x0c\n\x04\x64\x61ta\x18\x01 \x01(\x0c\x12\x0e\n\x06offset\x18\x02 \x01(\x04\x12\x12\n\ntotal_size\x18\x03 \x01(\x04\x12\x11\n\tbasis_key\x18\x04 \x01(\t\x12\x19\n\x11\x61lgorithm_version\x18\x05 \x01(\t\x12\x13\n\x0b\x61pi_version\x18\x06 \x01(\t*v\n\nSolveStage\x12\x1b\n\x17SOLVE_STAGE_UNSPECIFIED\x10\x00\x12\x16\n\x12SOLVE_STAGE_QUEUED\x10\x01\x12\x19\n\x15SOLVE_STAGE_COMPUTING\x10\x02\x12\x18\n\x14SOLVE_STAGE_STARTING\x10\x03\x62\x06proto3')
 
 _globals = globals()
 _builder.BuildMessageAndEnumDescriptors(DESCRIPTOR, _globals)
 _builder.BuildTopDescriptorsAndMessages(DESCRIPTOR, 'modewright.v1.solve_pb2', _globals)
 if not _descriptor._USE_C_DESCRIPTORS:
   DESCRIPTOR._loaded_options = None
-  _globals['_SOLVESTAGE']._serialized_start=1769
-  _globals['_SOLVESTAGE']._serialized_end=1861
+  _globals['_SOLVESTAGE']._serialized_start=1792
+  _globals['_SOLVESTAGE']._serialized_end=1910
   _globals['_CHECKREQUEST']._serialized_start=100
   _globals['_CHECKREQUEST']._serialized_end=213
   _globals['_CHECKRESPONSE']._serialized_start=216
@@ -44,15 +44,15 @@ if not _descriptor._USE_C_DESCRIPTORS:
   _globals['_SOLVEREQUEST']._serialized_start=578
   _globals['_SOLVEREQUEST']._serialized_end=691
   _globals['_SOLVERESPONSE']._serialized_start=694
-  _globals['_SOLVERESPONSE']._serialized_end=1143
-  _globals['_WATCHSOLVEREQUEST']._serialized_start=1146
-  _globals['_WATCHSOLVEREQUEST']._serialized_end=1290
-  _globals['_WATCHSOLVERESPONSE']._serialized_start=1293
-  _globals['_WATCHSOLVERESPONSE']._serialized_end=1421
-  _globals['_SOLVEPROGRESS']._serialized_start=1423
-  _globals['_SOLVEPROGRESS']._serialized_end=1544
-  _globals['_FETCHBASISREQUEST']._serialized_start=1546
-  _globals['_FETCHBASISREQUEST']._serialized_end=1627
-  _globals['_FETCHBASISRESPONSE']._serialized_start=1630
-  _globals['_FETCHBASISRESPONSE']._serialized_end=1767
+  _globals['_SOLVERESPONSE']._serialized_end=1166
+  _globals['_WATCHSOLVEREQUEST']._serialized_start=1169
+  _globals['_WATCHSOLVEREQUEST']._serialized_end=1313
+  _globals['_WATCHSOLVERESPONSE']._serialized_start=1316
+  _globals['_WATCHSOLVERESPONSE']._serialized_end=1444
+  _globals['_SOLVEPROGRESS']._serialized_start=1446
+  _globals['_SOLVEPROGRESS']._serialized_end=1567
+  _globals['_FETCHBASISREQUEST']._serialized_start=1569
+  _globals['_FETCHBASISREQUEST']._serialized_end=1650
+  _globals['_FETCHBASISRESPONSE']._serialized_start=1653
+  _globals['_FETCHBASISRESPONSE']._serialized_end=1790
 # @@protoc_insertion_point(module_scope)

@@ -14,9 +14,11 @@ class SolveStage(int, metaclass=_enum_type_wrapper.EnumTypeWrapper):
     SOLVE_STAGE_UNSPECIFIED: _ClassVar[SolveStage]
     SOLVE_STAGE_QUEUED: _ClassVar[SolveStage]
     SOLVE_STAGE_COMPUTING: _ClassVar[SolveStage]
+    SOLVE_STAGE_STARTING: _ClassVar[SolveStage]
 SOLVE_STAGE_UNSPECIFIED: SolveStage
 SOLVE_STAGE_QUEUED: SolveStage
 SOLVE_STAGE_COMPUTING: SolveStage
+SOLVE_STAGE_STARTING: SolveStage
 
 class CheckRequest(_message.Message):
     __slots__ = ("problem", "specification")
@@ -69,7 +71,7 @@ class SolveRequest(_message.Message):
     def __init__(self, problem: _Optional[_Union[_problem_pb2.Problem, _Mapping]] = ..., specification: _Optional[_Union[_basis_pb2.BasisSpecification, _Mapping]] = ...) -> None: ...
 
 class SolveResponse(_message.Message):
-    __slots__ = ("basis_key", "problem_digest", "algorithm_version", "api_version", "specification", "eigenvalues", "lower", "upper", "zeros", "groups", "confirmed", "scale", "ends", "answered_from_cache", "server_solve_count", "solve_seconds", "remarks")
+    __slots__ = ("basis_key", "problem_digest", "algorithm_version", "api_version", "specification", "eigenvalues", "lower", "upper", "zeros", "groups", "confirmed", "scale", "ends", "answered_from_cache", "server_solve_count", "solve_seconds", "remarks", "tolerance_met")
     BASIS_KEY_FIELD_NUMBER: _ClassVar[int]
     PROBLEM_DIGEST_FIELD_NUMBER: _ClassVar[int]
     ALGORITHM_VERSION_FIELD_NUMBER: _ClassVar[int]
@@ -87,6 +89,7 @@ class SolveResponse(_message.Message):
     SERVER_SOLVE_COUNT_FIELD_NUMBER: _ClassVar[int]
     SOLVE_SECONDS_FIELD_NUMBER: _ClassVar[int]
     REMARKS_FIELD_NUMBER: _ClassVar[int]
+    TOLERANCE_MET_FIELD_NUMBER: _ClassVar[int]
     basis_key: str
     problem_digest: str
     algorithm_version: str
@@ -104,7 +107,8 @@ class SolveResponse(_message.Message):
     server_solve_count: int
     solve_seconds: float
     remarks: _containers.RepeatedScalarFieldContainer[str]
-    def __init__(self, basis_key: _Optional[str] = ..., problem_digest: _Optional[str] = ..., algorithm_version: _Optional[str] = ..., api_version: _Optional[str] = ..., specification: _Optional[_Union[_basis_pb2.ResolvedSpecification, _Mapping]] = ..., eigenvalues: _Optional[_Iterable[float]] = ..., lower: _Optional[_Iterable[float]] = ..., upper: _Optional[_Iterable[float]] = ..., zeros: _Optional[_Iterable[int]] = ..., groups: _Optional[_Iterable[int]] = ..., confirmed: _Optional[_Iterable[_Union[_basis_pb2.CountConfirmation, str]]] = ..., scale: _Optional[float] = ..., ends: _Optional[_Union[_basis_pb2.Ends, _Mapping]] = ..., answered_from_cache: bool = ..., server_solve_count: _Optional[int] = ..., solve_seconds: _Optional[float] = ..., remarks: _Optional[_Iterable[str]] = ...) -> None: ...
+    tolerance_met: _containers.RepeatedScalarFieldContainer[bool]
+    def __init__(self, basis_key: _Optional[str] = ..., problem_digest: _Optional[str] = ..., algorithm_version: _Optional[str] = ..., api_version: _Optional[str] = ..., specification: _Optional[_Union[_basis_pb2.ResolvedSpecification, _Mapping]] = ..., eigenvalues: _Optional[_Iterable[float]] = ..., lower: _Optional[_Iterable[float]] = ..., upper: _Optional[_Iterable[float]] = ..., zeros: _Optional[_Iterable[int]] = ..., groups: _Optional[_Iterable[int]] = ..., confirmed: _Optional[_Iterable[_Union[_basis_pb2.CountConfirmation, str]]] = ..., scale: _Optional[float] = ..., ends: _Optional[_Union[_basis_pb2.Ends, _Mapping]] = ..., answered_from_cache: bool = ..., server_solve_count: _Optional[int] = ..., solve_seconds: _Optional[float] = ..., remarks: _Optional[_Iterable[str]] = ..., tolerance_met: _Optional[_Iterable[bool]] = ...) -> None: ...
 
 class WatchSolveRequest(_message.Message):
     __slots__ = ("problem", "specification", "interval_seconds")

@@ -48,6 +48,8 @@ _MOST_PIECES = 24_000
 _MANY = 600
 # Share of int p u'^2 that carries the defect where the rest of the form could be negative.
 _PART = 0.8
+# A cost that is never the least, and that a factor of 0 still makes 0.
+_NEVER = 1e300
 
 
 @dataclass(frozen=True, eq=False)
@@ -65,13 +67,19 @@ class Bounds:
     rounding: Array
 
 
-def coefficient_terms(mesh: CoefficientMesh, lam: Array) -> Array:
+def coefficient_terms(mesh: CoefficientMesh, resolved: Resolved, lam: Array, found: Array) -> Array:
     """(T,) how far lambda may move when the polynomials on `mesh` are replaced by p, q, w as written.
 
+    found: (T,) the energies of the modes (:class:`.modes.FluxDefect`).
+
     With relative errors d_p and d_w, (d_p / (1 - d_p) + d_w) (|lambda| + depth), depth = max(-q / w) bounding
-    the p-energy by lambda + depth. q off by d_q, and w off by an absolute d_w where no relative bound exists,
-    act through int |d| u^2: at most max(d / w), or int |d| dx sup u^2 with sup u^2 <= 2 / int w + 2 int 1/p
-    (lambda + depth) for a normalised u (its w-mean plus the energy of the way from there), whichever is less.
+    the p-energy by lambda + depth, or what was found where negative springs add to it. Where they are large
+    on short elements only (at the branch point of a square root), integrals serve better: w off by d acts
+    through int |d| u^2 <= int |d| dx sup u^2 with sup u^2 <= 2 / int w + 2 int 1/p (lambda + depth) for a
+    normalised u (its w-mean plus the energy of the way from there), and p through int d_p / p dx sup
+    (p u')^2, where p u' is bounded by its mean, from the energy, plus the integral of |q - lambda w| |u| and
+    what lumps and springs add. q off by d acts by max(d / w) or by int |d| dx sup u^2, whichever is less.
+    Infinite where nothing is known.
     """
     t, weight = np.polynomial.legendre.leggauss(8)
     vander = np.polynomial.legendre.legvander(t, mesh.p.shape[1] - 1).T
@@ -81,7 +89,8 @@ def coefficient_terms(mesh: CoefficientMesh, lam: Array) -> Array:
     lengths = np.where(plain, lengths, 0.0)
     dx = 0.5 * lengths[:, None] * weight
     total_w = float(((mesh.w @ vander) * dx).sum())
-    path = float((dx / (mesh.p @ vander)).sum())
+    paths = (dx / (mesh.p @ vander)).sum(axis=1)
+    path = float(paths.sum())
     part = ranges(mesh, 1)
     with np.errstate(divide="ignore", invalid="ignore"):
         depths = np.where(plain & (part.q_lower < 0.0), -part.q_lower / part.w_lower, 0.0)
@@ -96,11 +105,16 @@ def coefficient_terms(mesh: CoefficientMesh, lam: Array) -> Array:
         depth = min(depth, -2.0 * sunk / total_w)
     for element, end in mesh.end_maps:
         depth = max(depth, _end_depth(mesh, part, element, end, total_w))
-    energy = np.abs(lam) + depth
+    energy = np.maximum(np.abs(lam) + depth, np.maximum.accumulate(found))
     peak = 2.0 / total_w + 2.0 * path * energy
-    bounded = np.isfinite(mesh.w_error)
-    relative = float(mesh.p_error.max()) + float(mesh.w_error[bounded].max(initial=0.0))
-    relative /= 1.0 - min(0.5, float(mesh.p_error.max()))
+    flux = _largest_flux(
+        resolved, lam, energy, peak, path, total_w, float(np.abs(mesh.q @ vander * dx).sum())
+    )
+    # on end elements the relative errors serve: no integral is known there
+    p_integral = np.where(plain, mesh.p_error * paths, _NEVER)
+    w_integral = np.where(plain, mesh.w_absolute * lengths, _NEVER)
+    p_term = _relative_or_integral(mesh.p_error, p_integral, energy, flux)
+    w_term = _relative_or_integral(mesh.w_error, w_integral, energy, np.abs(lam) * peak)
     q_term = np.minimum(2.0 * float(direct.max()), float((mesh.q_error * lengths).sum()) * peak)
     if mesh.end_maps:
         # where q > 0, as steeply as beside a singular end, int q u^2 is part of the energy
@@ -109,8 +123,7 @@ def coefficient_terms(mesh: CoefficientMesh, lam: Array) -> Array:
         rest = float((mesh.q_error * lengths)[~positive].sum()) * peak
         others = np.minimum(2.0 * float(direct[~positive].max(initial=0.0)), rest)
         q_term = np.minimum(q_term, 2.0 * share * energy + others)
-    w_term = np.abs(lam) * float((mesh.w_absolute * lengths)[~bounded].sum()) * peak
-    result: Array = relative * energy + q_term + w_term
+    result: Array = p_term + w_term + q_term
     for element, end in mesh.end_maps:
         result += _end_term(mesh, part, element, end, energy, peak)
     return result
@@ -154,6 +167,45 @@ def _end_term(
     return result
 
 
+def _relative_or_integral(relative: Array, integral: Array, energy: Array, factor: Array) -> Array:
+    """(T,) max relative over some elements times energy, plus the sum of integral over the others times
+    factor: the cheapest choice of elements at the highest energy.
+    """
+    order = np.argsort(relative)
+    kept = np.concatenate([[0.0], relative[order]])
+    others = np.concatenate([np.cumsum(integral[order][::-1])[::-1], [0.0]])
+    with np.errstate(invalid="ignore", over="ignore"):
+        cost = np.where(kept < 0.5, kept * energy[-1], np.inf) + others * factor[-1]
+    best = int(np.argmin(cost))
+    if not np.isfinite(cost[best]):
+        return np.full(energy.size, np.inf)
+    # to second order too: the form keeps at least 1 - d of itself
+    share = kept[best] + others[best] * factor / np.maximum(energy, np.finfo(float).tiny)
+    with np.errstate(divide="ignore"):
+        return np.where(share < 1.0, share * energy / (1.0 - np.minimum(share, 0.999)), np.inf)
+
+
+def _largest_flux(
+    resolved: Resolved,
+    lam: Array,
+    energy: Array,
+    peak: Array,
+    path: float,
+    total_w: float,
+    total_q: float,
+) -> Array:
+    """(T,) a bound of sup (p u')^2 for u of unit norm in the span of the modes up to each."""
+    joints, ends = resolved.joints, (resolved.left, resolved.right)
+    masses = sum(joint.mass for joint in joints) + sum(e.mass + (e.lump[0] if e.lump else 0.0) for e in ends)
+    springs = sum(abs(joint.spring) for joint in joints)
+    springs += sum(abs(e.stiffness) + (e.lump[1] if e.lump else 0.0) for e in ends)
+    largest = np.sqrt(energy / path) + np.abs(lam) * (np.sqrt(total_w) + np.sqrt(masses))
+    largest += (total_q + springs) * np.sqrt(peak)
+    modes = np.arange(1.0, lam.size + 1.0)
+    result: Array = modes * np.maximum.accumulate(largest**2)
+    return result
+
+
 def bound(
     lam: Array,
     count: int,
@@ -169,7 +221,7 @@ def bound(
 
     scale: Lambda. degree: of the elements (rounding grows with it). first: index of lam[0].
     """
-    extra = coefficient_terms(mesh, lam)
+    extra = coefficient_terms(mesh, resolved, lam, defect.energy)
     index = first + np.arange(lam.size)
     rounding = 10.0 * 0.5 * _EPS * ((degree + index) * defect.energy + degree * scale)
     shift, part = _shift(lam, mesh, resolved, scale)

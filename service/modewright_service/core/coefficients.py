@@ -73,7 +73,9 @@ class CoefficientMesh:
 
 @dataclass(frozen=True, eq=False)
 class Ranges:
-    """Bounds of the coefficients as written on the pieces between ``edges`` (P+1,); arrays (P,)."""
+    """Bounds of the coefficients as written, and of their means, on the pieces between ``edges`` (P+1,);
+    arrays (P,).
+    """
 
     edges: FloatArray
     p_lower: FloatArray
@@ -82,6 +84,12 @@ class Ranges:
     q_upper: FloatArray
     w_lower: FloatArray
     w_upper: FloatArray
+    p_mean_lower: FloatArray
+    p_mean_upper: FloatArray
+    q_mean_lower: FloatArray
+    q_mean_upper: FloatArray
+    w_mean_lower: FloatArray
+    w_mean_upper: FloatArray
 
 
 def restrict(mesh: CoefficientMesh, edges: FloatArray) -> CoefficientMesh:
@@ -248,7 +256,11 @@ def ranges(mesh: CoefficientMesh, cuts: IntArray | int) -> Ranges:
         w_scaled = np.where(np.isfinite(w_error), bounds["w"][0] / (1 + w_error), 0.0)
     w_lower = np.maximum(np.maximum(w_scaled, bounds["w"][0] - w_absolute), 0.0) * down
     w_upper = np.maximum(np.minimum(w_relative, bounds["w"][1] + w_absolute), 0.0) * up
-    q_low, q_high = bounds["q"]
+    q_low, q_high = bounds["q"][:2]
+    means = {name: bounds[name][2] for name in bounds}
+    slack = {name: 4 * UNIT * np.abs(means[name]) + bounds[name][3] for name in bounds}
+    with np.errstate(divide="ignore", invalid="ignore"):
+        p_mean_upper = np.where(p_error < 1, (means["p"] + slack["p"]) / (1 - p_error), np.inf)
     return Ranges(
         edges,
         np.maximum(bounds["p"][0], 0.0) / (1 + p_error) * down,
@@ -257,22 +269,33 @@ def ranges(mesh: CoefficientMesh, cuts: IntArray | int) -> Ranges:
         q_high + q_error + 4 * UNIT * np.abs(q_high),
         w_lower,
         w_upper,
+        (means["p"] - slack["p"]) / (1 + p_error),
+        p_mean_upper,
+        means["q"] - slack["q"] - q_error,
+        means["q"] + slack["q"] + q_error,
+        np.maximum(means["w"] - slack["w"] - w_absolute, 0.0),
+        means["w"] + slack["w"] + w_absolute,
     )
 
 
-def _bounded(series: FloatArray, parent: IntArray, shift: Any, stretch: Any) -> tuple[FloatArray, FloatArray]:
+def _bounded(
+    series: FloatArray, parent: IntArray, shift: Any, stretch: Any
+) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+    """Lower and upper bound, mean, and the rounding of the mean, of each part."""
     rough = np.any(series[:, 1:], axis=1)[parent]
-    lower, upper = series[parent, 0].copy(), series[parent, 0].copy()
+    lower, upper, mean = (series[parent, 0].copy() for _ in range(3))
+    rounding = np.zeros(len(parent))
     part = np.flatnonzero(rough)
     if part.size == 0:
-        return lower, upper
+        return lower, upper, mean, rounding
     fine, change = _divided(series[parent[part]], shift[part], stretch[part])
     spread = (np.abs(fine[:, 1:]).sum(axis=1) + change) * (1 + 32 * UNIT)
     lower[part], upper[part] = fine[:, 0] - spread, fine[:, 0] + spread
+    mean[part], rounding[part] = fine[:, 0], change
     # Half a part's variation or more: look closer before giving away the sign.
     weak = part[lower[part] <= 0.5 * upper[part]]
     if weak.size:
         closer = piece_bounds(fine[np.searchsorted(part, weak)])
         lower[weak] = np.maximum(lower[weak], closer[0].min(axis=1))
         upper[weak] = np.minimum(upper[weak], closer[1].max(axis=1))
-    return lower, upper
+    return lower, upper, mean, rounding

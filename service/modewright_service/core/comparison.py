@@ -8,6 +8,9 @@ every element of the discretisation:
 
     count(nu) <= m   implies   lambda_m >= nu.
 
+Where a coefficient varies little over a piece, its mean less a term of second order serves instead of its
+least value (:mod:`.averages`).
+
 The state is (u, p u') with u >= 0, rescaled freely; a change of sign adds one to the count.
 
 Coupled ends, u(b) = e^{i theta} u(a): with u(a) = 0 there is one condition more, so that coupling adds at
@@ -24,6 +27,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from modewright_service.core.approximation import CoefficientMesh, ranges
+from modewright_service.core.averages import Averages, averages
 from modewright_service.core.end_comparison import EndPiece, end_piece
 from modewright_service.core.problem import EndTerm, Resolved
 
@@ -42,8 +46,8 @@ class Comparison:
 
     length, p, q: (P,). w_lower, w_upper: (P,), used for nu < 0 and nu >= 0. resistance, spring, mass: (P,)
     point terms at the right end of each piece (the mass and spring before the resistance). left, right: the
-    ends. factor: u(b) / u(a) where they are coupled. left_piece, right_piece: what stands for the end
-    elements, whose places among the pieces are left out.
+    ends. means: the bounds of second order. factor: u(b) / u(a) where they are coupled. left_piece,
+    right_piece: what stands for the end elements, whose places among the pieces are left out.
     """
 
     length: Array
@@ -56,6 +60,7 @@ class Comparison:
     mass: Array
     left: EndTerm
     right: EndTerm
+    means: Averages
     factor: complex | None = None
     left_piece: EndPiece | None = None
     right_piece: EndPiece | None = None
@@ -99,6 +104,7 @@ def build_comparison(mesh: CoefficientMesh, resolved: Resolved, cuts: IntArray) 
         mass[inside],
         resolved.left,
         resolved.right,
+        averages(bounds, float(bounds.edges[-1] - bounds.edges[0])).part(inside),
         resolved.factor,
         ends[0],
         ends[1],
@@ -115,8 +121,8 @@ def _count(c: Comparison, nu: Array, fraction: float, poll: Callable[[], None] |
         u = np.ones_like(nu)
         v, zeros = c.left_piece.stiffness(nu, fraction)
         count += zeros
-    for j, load in _loads(c, nu, poll):
-        u, v = _advance(u, v, c.length[j], fraction * c.p[j], load, count)
+    for j, p, load in _pieces(c, nu, fraction, poll):
+        u, v = _advance(u, v, c.length[j], p, load, count)
         if c.spring[j] != 0.0 or c.mass[j] != 0.0:
             v = v + (c.spring[j] - nu * c.mass[j]) * u
         if c.resistance[j] > 0.0:
@@ -128,15 +134,6 @@ def _count(c: Comparison, nu: Array, fraction: float, poll: Callable[[], None] |
     return _finish(right, nu, fraction, u, v, count)
 
 
-def _loads(c: Comparison, nu: Array, poll: Callable[[], None] | None) -> Iterator[tuple[int, Array]]:
-    """Pieces from left to right with q - nu w (T,) on each."""
-    negative = nu < 0.0
-    for j in range(c.pieces):
-        if poll is not None and j % _POLL_EVERY == 0:
-            poll()
-        yield j, c.q[j] - nu * np.where(negative, c.w_lower[j], c.w_upper[j])
-
-
 def _closing(
     c: Comparison, nu: Array, fraction: float, zeros: IntArray, poll: Callable[[], None] | None
 ) -> IntArray:
@@ -145,8 +142,8 @@ def _closing(
     m = np.zeros((2, 2, nu.size))
     m[0, 0] = m[1, 1] = 1.0
     log = np.zeros(nu.size)
-    for j, load in _loads(c, nu, poll):
-        h, p = c.length[j], fraction * c.p[j]
+    for j, p, load in _pieces(c, nu, fraction, poll):
+        h = c.length[j]
         square = -load / p
         root = np.sqrt(np.abs(square))
         phase = root * h
@@ -169,6 +166,19 @@ def _closing(
     cosine = complex(c.factor or 1.0).real
     trace = m[0, 0] + m[1, 1] - 2.0 * cosine * np.exp(np.minimum(-log, 700.0))
     return np.asarray(trace * np.where(zeros % 2 == 0, 1.0, -1.0) < 0.0, dtype=np.int64)
+
+
+def _pieces(
+    c: Comparison, nu: Array, fraction: float, poll: Callable[[], None] | None
+) -> Iterator[tuple[int, Array, Array]]:
+    """Pieces from left to right with p and q - nu w (T,) on each."""
+    negative = nu < 0.0
+    for j in range(c.pieces):
+        if poll is not None and j % _POLL_EVERY == 0:
+            poll()
+        load = c.q[j] - nu * np.where(negative, c.w_lower[j], c.w_upper[j])
+        p, mean, usable = c.means.piece(j, nu, fraction)
+        yield j, np.where(usable, p, fraction * c.p[j]), np.where(usable, mean, load)
 
 
 def _start(end: EndTerm, nu: Array, fraction: float, count: IntArray) -> tuple[Array, Array]:
@@ -206,7 +216,7 @@ def _positive(u: Array, v: Array, count: IntArray) -> tuple[Array, Array]:
     return u * sign, v * sign
 
 
-def _advance(u: Array, v: Array, h: float, p: float, load: Array, count: IntArray) -> tuple[Array, Array]:
+def _advance(u: Array, v: Array, h: float, p: Array, load: Array, count: IntArray) -> tuple[Array, Array]:
     """Over one piece of constant p and load = q - nu w; u >= 0 in and out, the larger of |u|, |v| h / p
     normalised to one.
     """

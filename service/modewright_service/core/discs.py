@@ -151,8 +151,9 @@ def _monotone(
     a: Disc, function: Callable[[Array], Array], units: float = FUNCTION_UNITS, least: float = -np.inf
 ) -> Disc:
     """A monotone function of real discs in [least, inf): about its value for points, else end by end."""
-    # An interval that begins at the bound was widened by the guard of the operations that made it.
-    inside = low(a) >= least - 2.0**-36 * (high(a) - least if np.isfinite(least) else 0)
+    # An interval that begins at the bound was widened by rounding and by the guard of the operations that
+    # made it: on the smallest elements by as much as this.
+    inside = low(a) >= least - 2.0**-12 * (high(a) - least if np.isfinite(least) else 0)
     start, stop = np.maximum(low(a), least), np.maximum(high(a), least)
     ends = function(np.where(inside, start, 1)), function(np.where(inside, stop, 1))
     slack = units * unit(a.centre) * np.maximum(np.abs(ends[0]), np.abs(ends[1])) + _underflow(a.centre)

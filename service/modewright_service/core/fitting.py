@@ -312,6 +312,10 @@ def _fit(
         spread = _range_error(source, batch, series, unsettled, opened)
         absolute[unsettled] = np.minimum(absolute[unsettled], spread)
         good[unsettled] = spread <= target[unsettled]
+        if source.signed:
+            # the range on pieces may show what the ellipses could not
+            shown = positive_floor(series[unsettled]) - absolute[unsettled]
+            floor[unsettled] = np.maximum(floor[unsettled], shown)
     # Values below the range of double are rounded to zero.
     absolute += np.finfo(np.float64).tiny
     absolute[nothing] = 0.0

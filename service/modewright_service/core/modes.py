@@ -208,6 +208,15 @@ def interior_zeros(chain: Chain, modes: Modes, legendre: Field) -> NDArray[np.in
     peak = np.max(np.abs(samples), axis=2, keepdims=True)
     signs = np.where(np.abs(samples) > np.maximum(1e-12 * peak, _FADED), np.sign(samples), 0.0)
     signs = signs.reshape(legendre.shape[0], -1)
+    # beside a lump that hardly moves the last zero may lie within rounding of the end; the node's own value
+    # comes from a recurrence in which nothing cancels
+    for column, node, fixed in (
+        (0, chain.left_node, chain.left_fixed),
+        (-1, chain.right_node, chain.right_fixed),
+    ):
+        if not fixed:
+            value = modes.nodes[node, : signs.shape[0]]
+            signs[:, column] = np.where(np.abs(value) > _FADED, np.sign(value), signs[:, column])
     if chain.left_node == 1:
         signs = np.concatenate([np.sign(modes.nodes[:1].T), signs], axis=1)
     if chain.right_node < chain.links:

@@ -7,8 +7,9 @@ node with c_X (on a uniform mesh all poles are met at once, and the partner of a
 or c_X with c_Y (where lambda is far from the poles, as in a fine mesh; what is kept then is the node's
 deviation from the static interpolation between the ends). The largest relative pivot decides. What remains is
 one Hermitian 2 x 2 matrix in (u_a, c), whose inertia completes the count, and whose pencil with its mass
-matrix gives the corrections to the two nearest eigenvalues at a time: closed gaps, where eigenvalues of periodic
-problems are double (Magnus and Winkler, Hill's Equation, 1966, ch. II), are then as easy as open ones.
+matrix gives the corrections to the two nearest eigenvalues at a time: closed gaps, where eigenvalues of
+periodic problems are double (Magnus and Winkler, Hill's Equation, 1966, ch. II), are then as easy as open
+ones.
 
 All formulas keep the row sums alpha, gamma of a link apart from its conductance g, which may be larger by
 many orders. In the notation of :mod:`.condensed`, with rho = gamma + alpha' + node terms, d = rho + g + g'

@@ -12,6 +12,7 @@ from __future__ import annotations
 import time
 from collections.abc import Callable
 from dataclasses import dataclass, replace
+from typing import NoReturn
 
 import numpy as np
 from numpy.typing import NDArray
@@ -54,6 +55,7 @@ from modewright_service.core.selection import (
     check_selection,
 )
 from modewright_service.core.spectrum import System, eigenvalues, floor_below
+from modewright_service.core.unbounded import unbounded_below
 
 __all__ = ["SolveOptions", "solve"]
 
@@ -113,8 +115,10 @@ def solve(
     """The eigenpairs of `problem` that `selection` names (a number: so many of the lowest), none missed, each
     with bounds.
 
-    rtol: width wanted for every pair of bounds, relative to max(|lambda|, Lambda); where rounding does not
-    allow it the bounds are as wide as they have to be. poll is called inside the loops and may raise.
+    rtol: width wanted for every pair of bounds, relative to max(|lambda|, Lambda). Where rounding, the
+    resolution of the coefficients or the effort allowed do not reach it, the bounds are as wide as they have
+    to be, and :attr:`Record.tolerance_met` says so. Bounds that are not finite are an error, not an answer.
+    poll is called inside the loops and may raise.
 
     Raises InvalidProblem, InvalidRequest, Unsupported, SpectrumExhausted, NotConverged, and whatever poll
     raises.
@@ -134,6 +138,7 @@ def solve(
             "w is zero in every layer: only lumped masses carry lambda",
             _asked(wish),
         )
+    _check_resolved(coefficients, rtol)
     scale = fundamental(coefficients)
     if not _SMALLEST_SCALE <= scale <= 1.0 / _SMALLEST_SCALE:
         message = "lambda would be of the size of Lambda = (pi / int sqrt(w/p) dx)^2: use other units"
@@ -141,14 +146,20 @@ def solve(
     moved, shift = (coefficients, 0.0) if _has_mass(resolved) else _without_offset(coefficients, scale)
     try:
         result = _adapt(moved, resolved, _moved(wish, -shift), rtol, scale, chosen, poll)
-    except np.linalg.LinAlgError as error:
-        largest = int(np.argmax(np.abs(coefficients.q).max(axis=1)))
+    except (np.linalg.LinAlgError, NotConverged) as error:
+        fault = unbounded_below(problem, resolved, coefficients)
+        if fault is None and isinstance(error, NotConverged):
+            raise
+        if fault is None:
+            e = int(np.argmax(np.abs(coefficients.q).max(axis=1)))
+            fault = f"layers[{coefficients.layer[e]}].q", float(coefficients.q[e, 0])
         raise NotConverged.at(
             Reason.NOT_CONVERGED,
-            f"layers[{coefficients.layer[largest]}].q",
-            "too large to be solved with, or negative where w is zero: no lowest eigenvalue was found",
-            float(coefficients.q[largest, 0]),
+            fault[0],
+            "too large to be solved with, or too negative where w is zero: no lowest eigenvalue was found",
+            fault[1],
         ) from error
+    _check_bounds(result, rtol)
     record = _record(problem, resolved, plans, result, wish, rtol, scale, time.perf_counter() - started)
     return record if shift == 0.0 else _moved_back(record, shift, coefficients)
 
@@ -401,6 +412,62 @@ def _check_counts(system: System, first: int, values: Array) -> None:
         )
 
 
+def _check_resolved(mesh: CoefficientMesh, rtol: float) -> None:
+    """Raise NotConverged where p or w is so far from its polynomials that no bound could be finite."""
+    lengths = np.diff(mesh.edges)
+    lost = np.where(mesh.w_error >= 0.5, mesh.w_absolute * lengths, 0.0)
+    unresolved = {
+        "p": float(mesh.p_error.max()) if not np.isfinite(mesh.p_error).all() else 0.0,
+        "w": float(mesh.w_error.max()) if lost.sum() >= 0.5 * (mesh.w[:, 0] * lengths).sum() else 0.0,
+    }
+    for name, reached in unresolved.items():
+        if reached > 0.0:
+            errors = {"p": mesh.p_error, "w": mesh.w_error}[name]
+            _raise_unresolved(mesh, name, int(np.argmax(errors)), float(errors.max()), rtol)
+
+
+def _raise_unresolved(mesh: CoefficientMesh, name: str, e: int, reached: float, rtol: float) -> NoReturn:
+    message = (
+        f"varies too fast to be resolved between x = {float(mesh.edges[e])!r} and "
+        f"{float(mesh.edges[e + 1])!r} (relative error {reached:.3g}), so that no eigenvalue has finite "
+        "bounds; cut the layer there, smooth the coefficient or give its mean"
+    )
+    raise NotConverged.at(
+        Reason.NOT_CONVERGED,
+        f"layers[{int(mesh.layer[e])}].{name}",
+        message,
+        reached,
+        reached="inf",
+        wanted=repr(rtol),
+        mode="0",
+    )
+
+
+def _check_bounds(result: _Pass, rtol: float) -> None:
+    """Raise NotConverged where an eigenvalue has no finite bounds."""
+    bounds, mesh = result.bounds, result.mesh
+    missing = np.flatnonzero(~(np.isfinite(bounds.lower) & np.isfinite(bounds.upper)))
+    if missing.size == 0:
+        return
+    n = int(missing[0])
+    if not np.isfinite(bounds.rounding[n]):
+        worst = max((("p", mesh.p_error), ("w", mesh.w_error)), key=lambda pair: float(pair[1].max()))
+        _raise_unresolved(mesh, worst[0], int(np.argmax(worst[1])), float(worst[1].max()), rtol)
+    message = (
+        f"mode {n}, found near {float(result.values[n])!r}, has no finite lower bound: no comparison "
+        "problem confirms its index; cut layers where coefficients vary fast, or ask for fewer modes"
+    )
+    raise NotConverged.at(
+        Reason.NOT_CONVERGED,
+        "modes",
+        message,
+        str(n),
+        reached="inf",
+        wanted=repr(rtol),
+        mode=str(n),
+    )
+
+
 def _marked(result: _Pass, rtol: float, scale: float) -> NDArray[np.bool_]:
     """Elements whose flux defects keep some eigenvalue from the tolerance."""
     count = result.count
@@ -408,6 +475,11 @@ def _marked(result: _Pass, rtol: float, scale: float) -> NDArray[np.bool_]:
     shares = result.defect.by_element[:count]
     # int d^2 / p estimates the error of a Ritz value closely, whether or not a comparison bounds it
     short = np.flatnonzero(shares.sum(axis=1) > _SHARE * rtol * size)
+    # where the bound itself is wider than that estimate, a smaller defect narrows it too
+    bounds = result.bounds
+    wide = bounds.confirmed & (bounds.defect > 0.5 * rtol * size)
+    wide &= shares.sum(axis=1) > 1e-3 * rtol * size
+    short = np.union1d(short, np.flatnonzero(wide))
     marked = np.zeros(shares.shape[1], dtype=bool)
     if short.size:
         # a mode's worst elements, down to a tenth of the worst: the rest would not be seen

@@ -64,7 +64,8 @@ def floor_below(system: System, scale: float) -> float:
     scale: a positive lambda of the size of the smallest eigenvalue gaps, the first trial.
     """
     trial = -1e-3 * scale
-    for _ in range(400):
+    # to 1e33 times the scale: what binds deeper is not within doubles of the rest
+    for _ in range(120):
         if int(system.count(np.array([trial]))[0]) == 0:
             return trial
         trial *= 2.0

@@ -12,9 +12,12 @@ import contextlib
 import importlib
 import logging
 import os
+import shutil
 import signal
 import threading
+import time
 from concurrent.futures import ThreadPoolExecutor
+from pathlib import Path
 from typing import Any, Final
 
 import grpc
@@ -41,9 +44,11 @@ _log = logging.getLogger(__name__)
 SERVICE_NAME: Final = eigenbasis_service_pb2.DESCRIPTOR.services_by_name["EigenbasisService"].full_name
 # Above the limit that answers with a reason, so that only what is far too large meets gRPC's bare refusal.
 _HEADROOM: Final = 1024 * 1024
-# Time for the answers of calls that were refused at the end of the grace period to leave.
+# Time for the last answers, also those of calls refused at the end of the grace period, to leave.
 _FLUSH_SECONDS: Final = 2.0
 _ORPHAN_SECONDS: Final = 5.0
+# How often a stopping service looks whether its last call has been answered.
+_LOOK_SECONDS: Final = 0.05
 _SERVING = health_pb2.HealthCheckResponse.SERVING
 _NOT_SERVING = health_pb2.HealthCheckResponse.NOT_SERVING
 
@@ -135,18 +140,26 @@ class Service:
 
     def _bind(self, server: grpc.aio.Server) -> str:
         settings = self._settings
-        try:
-            if settings.tls_certificate:
-                from modewright_service.process.tls import server_credentials
+        credentials = None
+        if settings.tls_certificate:
+            from modewright_service.process.tls import server_credentials
 
+            try:
                 credentials = server_credentials(
                     settings.tls_certificate, settings.tls_key, settings.tls_client_ca
                 )
+            except OSError as error:
+                raise SettingsError(f"tls: cannot read {error.filename!r}: {error.strerror}") from error
+        try:
+            if credentials is not None:
                 port = server.add_secure_port(settings.listen, credentials)
             else:
                 port = server.add_insecure_port(settings.listen)
         except (OSError, RuntimeError, ValueError) as error:
-            raise SettingsError(f"listen: cannot serve on {settings.listen!r}: {error}") from error
+            # gRPC's own words end in advice on its debugging that helps nobody here.
+            reason = str(error).partition(";")[0]
+            doubt = "do the TLS files fit together, and is it free?" if credentials else "is it free?"
+            raise SettingsError(f"listen: cannot serve on {settings.listen!r}: {reason}: {doubt}") from error
         if settings.listen.startswith("unix:"):
             return settings.listen
         return f"{settings.listen.rpartition(':')[0]}:{port}"
@@ -174,8 +187,10 @@ class Service:
         self._draining = True
         if self._server is not None:
             stopping = asyncio.ensure_future(self._server.stop(grace + _FLUSH_SECONDS if grace else None))
-            await asyncio.wait({stopping}, timeout=grace)
+            await self._last_answer(stopping, grace)
             await self.pool.close()
+            # What is left are answers on their way, and watchers of health, who would stay for ever.
+            await self._server.stop(_FLUSH_SECONDS if grace else None)
             await stopping
         else:
             await self.pool.close()
@@ -185,6 +200,15 @@ class Service:
         self._crew.board.close()
         self._crew.spool.close()
         _log.info("stopped")
+
+    async def _last_answer(self, stopping: asyncio.Future[None], grace: float) -> None:
+        """Wait until no call of this package is under way, at most `grace` seconds."""
+        limit = time.monotonic() + grace
+        while (left := limit - time.monotonic()) > 0.0:
+            # Before the first look as well: a call that has just been accepted is not counted yet.
+            await asyncio.wait({stopping}, timeout=min(left, _LOOK_SECONDS))
+            if stopping.done() or not self.counters.calls_in_flight:
+                return
 
 
 def _add_channelz(server: grpc.aio.Server) -> str:
@@ -197,10 +221,13 @@ def _add_channelz(server: grpc.aio.Server) -> str:
     return str(channelz_pb2.DESCRIPTOR.services_by_name["Channelz"].full_name)
 
 
-async def serve(settings: Settings, crew: Crew, ready_fd: int | None = None) -> None:
+async def serve(
+    settings: Settings, crew: Crew, ready_fd: int | None = None, folder: Path | None = None
+) -> None:
     """Serve until told to stop: by SIGTERM or SIGINT, or, embedded, by the parent's end of `ready_fd`
     closing.
 
+    folder: the parent's folder for this service, removed when the parent is gone.
     SIGTERM drains first; SIGINT, typed by a person, does not; a second signal ends the waiting.
     """
     loop = asyncio.get_running_loop()
@@ -225,10 +252,13 @@ async def serve(settings: Settings, crew: Crew, ready_fd: int | None = None) -> 
         def gone() -> None:
             # Nobody is left to wait for: whatever hangs must not keep this process alive.
             threading.Timer(_ORPHAN_SECONDS, os._exit, (0,)).start()
+            if folder is not None:
+                shutil.rmtree(folder, ignore_errors=True)
             loop.call_soon_threadsafe(told.put_nowait, "orphaned")
 
         watch_parent(ready_fd, gone)
-        announce(ready_fd, address)
+        with contextlib.suppress(OSError):  # the parent has gone already, which the watch will see
+            announce(ready_fd, address)
 
     cause = await told.get()
     _log.info("stopping", extra={"cause": cause})

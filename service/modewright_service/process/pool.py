@@ -28,7 +28,7 @@ from modewright_service.process.slots import SlotBoard
 from modewright_service.process.spawn import Spawned, WorkerSetup, spawn
 from modewright_service.process.spool import Spool
 from modewright_service.store.counters import Counters
-from modewright_service.store.orders import Computed, Order, Progress
+from modewright_service.store.orders import Computed, Order, Progress, damaged
 
 __all__ = ["PoolLimits", "WorkerPool"]
 
@@ -165,7 +165,7 @@ class WorkerPool:
                 return Progress(computing=True, steps=self._board.steps(slot))
         for position, ticket in enumerate(self._waiting):
             if ticket.order is order:
-                return Progress(computing=False, position=position)
+                return Progress(computing=False, position=position, starting=not self.usable)
         # Computed; the record is being read.
         return Progress(computing=True, steps=order.steps)
 
@@ -180,9 +180,11 @@ class WorkerPool:
         self._waiting.clear()
         for slot, worker in self._workers.items():
             self._board.cancel(slot)
-            worker.writer.close()
-        for spawned in self._spawned.values():
+            self._dismiss(worker)
+        unattended, self._spawned = list(self._spawned.values()), {}
+        for spawned in unattended:
             spawned.sock.close()
+            spawned.process.kill()
             await _reap(spawned.process)
         # Supervisors that wait for a worker see it end; those that wait to start one are cancelled.
         _, pending = (
@@ -194,6 +196,13 @@ class WorkerPool:
             if isinstance(result, Exception):
                 _log.error("a supervisor failed", exc_info=result)
         self._count()
+
+    def _dismiss(self, worker: _Worker) -> None:
+        """Have a worker end: by the end of its socket, or at once when it has nothing that it could lose."""
+        worker.writer.close()
+        if not worker.ready:
+            # Still importing the solver: it would look at its socket only after that.
+            worker.spawned.process.kill()
 
     # ---- the queue ----
 
@@ -299,6 +308,8 @@ class WorkerPool:
         reader, writer = await asyncio.open_connection(sock=spawned.sock)
         worker = _Worker(spawned, writer)
         self._workers[spawned.slot] = worker
+        if self._closing:  # begun while it connected
+            self._dismiss(worker)
         try:
             async with asyncio.timeout(self._limits.start) as starting:
                 while True:
@@ -368,11 +379,10 @@ class WorkerPool:
             case frames.Finished():
                 try:
                     data = self._spool.take(Path(message.path))
-                except OSError as error:
-                    _fail(
-                        ticket,
-                        CoreError(Reason.INTERNAL, f"the record cannot be read from the spool: {error}"),
-                    )
+                except (OSError, ValueError) as error:  # ValueError: an empty file cannot be mapped
+                    self._counters.records_damaged += 1
+                    _log.error("a record cannot be read from the spool", exc_info=error)
+                    _fail(ticket, damaged())
                     return
                 self._counters.solves_finished += 1
                 self._counters.solve_seconds.add(message.seconds)

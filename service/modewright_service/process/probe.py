@@ -20,7 +20,12 @@ def probe(address: str, *, service: str = "", timeout: float = 5.0, ca: str = ""
 
     options = [("grpc.enable_retries", 0)]
     if ca:
-        channel = grpc.secure_channel(address, grpc.ssl_channel_credentials(Path(ca).read_bytes()), options)
+        try:
+            authority = Path(ca).read_bytes()
+        except OSError as error:
+            print(f"{ca}: {error.strerror}", file=sys.stderr)
+            return 1
+        channel = grpc.secure_channel(address, grpc.ssl_channel_credentials(authority), options)
     else:
         channel = grpc.insecure_channel(address, options)
     with channel:

@@ -16,6 +16,8 @@ from typing import Any, Final
 __all__ = ["PREFIX", "Settings", "SettingsError", "parse"]
 
 PREFIX: Final = "MODEWRIGHT_"
+# More than the processors of any machine that this is meant for: a slip of the finger.
+_MOST_WORKERS: Final = 1024
 _TRUE: Final = {"1", "true", "yes", "on"}
 _FALSE: Final = {"0", "false", "no", "off"}
 
@@ -24,8 +26,9 @@ class SettingsError(ValueError):
     """A setting that cannot be used; the text names it and its value."""
 
 
-def _setting(default: Any, text: str, least: float | None = None) -> Any:
-    return field(default=default, metadata={"help": text, "least": least})
+def _setting(default: Any, text: str, least: float | None = None, form: str = "") -> Any:
+    """A field of the table. form: how help text names its value; by its type where that says enough."""
+    return field(default=default, metadata={"help": text, "least": least, "form": form})
 
 
 def available_cpus() -> int:
@@ -41,16 +44,17 @@ def _default_spool() -> Path:
 class Settings:
     """Everything about a service process that can be set; times in seconds, sizes in bytes."""
 
-    listen: str = _setting("127.0.0.1:50051", "address to serve on: host:port, or unix:/path")
+    listen: str = _setting("127.0.0.1:50051", "address to serve on: host:port, or unix:/path", form="ADDRESS")
     workers: int = _setting(0, "processes that solve; 0: one less than there are processors, at least one", 0)
     worker_nice: int = _setting(10, "niceness of the workers", 0)
     spool: Path = field(
-        default_factory=_default_spool, metadata={"help": "folder through which workers hand over results"}
+        default_factory=_default_spool,
+        metadata={"help": "folder through which workers hand over results", "form": "PATH"},
     )
-    cache_bytes: int = _setting(512 * 1024 * 1024, "memory for bases and operators", 0)
+    cache_bytes: int = _setting(512 * 1024 * 1024, "memory for bases and operators", 0, "BYTES")
     queue: int = _setting(256, "solves that may wait for a worker", 0)
     max_modes: int = _setting(2048, "most modes of one basis", 1)
-    message_bytes: int = _setting(8 * 1024 * 1024, "largest request and answer", 64 * 1024)
+    message_bytes: int = _setting(8 * 1024 * 1024, "largest request and answer", 64 * 1024, "BYTES")
     call_seconds: float = _setting(3600.0, "longest that any call may take", 1.0)
     cancel_grace: float = _setting(10.0, "time a worker has to heed a cancellation before it is killed", 0.1)
     threads: int = _setting(2, "threads for transforms in the front", 1)
@@ -63,12 +67,16 @@ class Settings:
     )
     reflection: bool = _setting(True, "answer server reflection")
     channelz: bool = _setting(False, "answer channelz (needs grpcio-channelz)")
-    metrics: str = _setting("", "host:port for Prometheus metrics over HTTP; empty: none")
-    tls_certificate: str = _setting("", "PEM file of the certificate chain; reread when it changes")
-    tls_key: str = _setting("", "PEM file of its private key")
-    tls_client_ca: str = _setting("", "PEM file of the authorities that clients' certificates must come from")
-    log_level: str = _setting("info", "debug, info, warning or error")
-    log_format: str = _setting("json", "json (an object a line) or text")
+    metrics: str = _setting("", "host:port for Prometheus metrics over HTTP; empty: none", form="ADDRESS")
+    tls_certificate: str = _setting(
+        "", "PEM file of the certificate chain, which switches TLS on; reread when it changes", form="PATH"
+    )
+    tls_key: str = _setting("", "PEM file of its private key", form="PATH")
+    tls_client_ca: str = _setting(
+        "", "PEM file of the authorities that clients' certificates must come from", form="PATH"
+    )
+    log_level: str = _setting("info", "debug, info, warning or error", form="LEVEL")
+    log_format: str = _setting("json", "json (an object a line) or text", form="FORMAT")
 
     def __post_init__(self) -> None:
         for item in fields(self):
@@ -76,6 +84,12 @@ class Settings:
             value = getattr(self, item.name)
             if least is not None and not value >= least:
                 raise SettingsError(f"{item.name}: {value} is below {least:g}")
+        if self.workers > _MOST_WORKERS:
+            raise SettingsError(f"workers: {self.workers} is above {_MOST_WORKERS}")
+        if not self.listen.startswith("unix:"):
+            _check_address("listen", self.listen)
+        if self.metrics:
+            _check_address("metrics", self.metrics)
         if bool(self.tls_certificate) != bool(self.tls_key):
             raise SettingsError("tls_certificate and tls_key: one is set without the other")
         if self.tls_client_ca and not self.tls_certificate:
@@ -91,16 +105,26 @@ class Settings:
         return self.workers or max(1, available_cpus() - 1)
 
 
+def _check_address(name: str, address: str) -> None:
+    host, _, port = address.rpartition(":")
+    if not host or not port.isdecimal() or int(port) > 65535:
+        raise SettingsError(f"{name}: {address!r} is not host:port")
+
+
 def add_flags(parser: argparse.ArgumentParser) -> None:
     """A flag for each setting; its default stays unset, so that the environment can speak."""
     for item in fields(Settings):
         flag = "--" + item.name.replace("_", "-")
         default = _default_spool() if item.name == "spool" else item.default
-        text = f"{item.metadata['help']} (default: {default or 'none'}; {PREFIX}{item.name.upper()})"
+        shown = {True: "yes", False: "no"}[default] if isinstance(default, bool) else default
+        shown = f"{shown:g}" if isinstance(shown, float) else shown
+        text = f"{item.metadata['help']} (default: {'none' if shown == '' else shown}; "
+        text = f"{text}{PREFIX}{item.name.upper()})".replace("%", "%%")
         if isinstance(default, bool):
             parser.add_argument(flag, action=argparse.BooleanOptionalAction, default=None, help=text)
         else:
-            parser.add_argument(flag, metavar="VALUE", default=None, help=text.replace("%", "%%"))
+            form = item.metadata.get("form") or ("SECONDS" if isinstance(default, float) else "NUMBER")
+            parser.add_argument(flag, metavar=form, default=None, help=text)
 
 
 def parse(flags: argparse.Namespace | None, environment: Mapping[str, str], **forced: Any) -> Settings:

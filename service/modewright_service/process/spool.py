@@ -55,11 +55,15 @@ class Spool:
         return self.folder / name
 
     def take(self, path: Path) -> mmap.mmap:
-        """The bytes of a record that a worker has written, memory-mapped; the file has no name afterwards."""
-        with path.open("rb") as file:
-            data = mmap.mmap(file.fileno(), 0, access=mmap.ACCESS_READ)
-        path.unlink()
-        return data
+        """The bytes of a record that a worker has written, memory-mapped; the file has no name afterwards.
+
+        Raises OSError when there is none, ValueError when it is empty.
+        """
+        try:
+            with path.open("rb") as file:
+                return mmap.mmap(file.fileno(), 0, access=mmap.ACCESS_READ)
+        finally:
+            path.unlink(missing_ok=True)
 
     def close(self) -> None:
         """Remove the subfolder."""

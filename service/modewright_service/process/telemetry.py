@@ -22,6 +22,7 @@ _COUNTERS: Final = {
     "solves_failed": "Solves refused by the solver or lost.",
     "solves_cancelled": "Solves stopped because nobody waited any more or the deadline passed.",
     "solves_retried": "Solves tried again after their worker had died.",
+    "records_damaged": "Records that came damaged from a worker and were thrown away.",
     "solve_joins": "Calls that joined a solve which another call had started.",
     "cache_hits": "Calls answered from the memory cache.",
     "cache_misses": "Calls that found no basis in the memory cache.",

@@ -8,7 +8,6 @@ structure are collected; the core's own checks of the numbers follow.
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable
 from typing import Final
 
 import numpy as np
@@ -320,22 +319,33 @@ def solve_response(
         zeros=record.zeros[:n].tolist(),
         groups=record.groups[:n].tolist(),
         confirmed=[confirmed[int(value)] for value in record.confirmed[:n]],
+        tolerance_met=record.tolerance_met[:n].tolist(),
         scale=record.scale,
         ends=ends_message(wanted.problem, (record.left.classification, record.right.classification)),
         answered_from_cache=shared,
         server_solve_count=solve_count,
         solve_seconds=seconds,
-        remarks=_remarks(record.confirmed[:n].tolist(), record.groups[:n].tolist()),
+        remarks=_remarks(record.head(n)),
     )
 
 
-def _remarks(confirmed: Iterable[int], groups: list[int]) -> list[str]:
+def _remarks(record: Record) -> list[str]:
     remarks = []
-    unconfirmed = sum(1 for value in confirmed if not value)
+    groups = record.groups.tolist()
+    short = np.flatnonzero(~record.tolerance_met)
+    if short.size:
+        size = np.maximum(np.abs(record.eigenvalues), record.scale)
+        widths = ((record.upper - record.lower) / size)[short]
+        worst = int(np.argmax(widths))
+        remarks.append(
+            f"the tolerance {record.rtol:g} was not met for {short.size} of the eigenvalues: the bounds of "
+            f"mode {short[worst]} are {widths[worst]:.2g} apart, relative to max(|lambda|, scale)"
+        )
+    unconfirmed = int(np.count_nonzero(record.confirmed == 0))
     if unconfirmed:
         remarks.append(
-            f"{unconfirmed} of the indices rest on the discrete count only; their lower bounds assume "
-            "that it is the true one"
+            f"{unconfirmed} of the indices rest on the discrete count only; their lower bounds are those of "
+            "a comparison problem alone, and may be far below"
         )
     together = len(groups) - len(set(groups))
     if together:

@@ -94,10 +94,14 @@ class EigenbasisServicer(eigenbasis_service_pb2_grpc.EigenbasisServiceServicer):
 
     def _progress(self, wanted: Wanted, elapsed: float) -> solve_pb2.WatchSolveResponse:
         progress = self._desk.library.progress(wanted)
-        computing = progress is None or progress.computing
+        stage = solve_pb2.SOLVE_STAGE_COMPUTING
+        if progress is not None and progress.starting:
+            stage = solve_pb2.SOLVE_STAGE_STARTING
+        elif progress is not None and not progress.computing:
+            stage = solve_pb2.SOLVE_STAGE_QUEUED
         return solve_pb2.WatchSolveResponse(
             progress=solve_pb2.SolveProgress(
-                stage=solve_pb2.SOLVE_STAGE_COMPUTING if computing else solve_pb2.SOLVE_STAGE_QUEUED,
+                stage=stage,
                 queue_position=progress.position if progress else 0,
                 elapsed_seconds=elapsed,
                 steps=progress.steps if progress else 0,

@@ -13,12 +13,13 @@ import logging
 import time
 import uuid
 from collections.abc import AsyncIterator, Awaitable, Callable
+from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any, Final
 
 import grpc
-from google.protobuf.message import Message
+from google.protobuf.message import DecodeError, Message
 
-from modewright_service.core.errors import CoreError, LimitExceeded, Reason
+from modewright_service.core.errors import CoreError, InvalidRequest, LimitExceeded, Reason
 from modewright_service.rpc.status import DETAILS_KEY, code_of, status_of
 from modewright_service.store.counters import Counters
 
@@ -64,7 +65,7 @@ class CallGuard(_Interceptor):
         name = method.rpartition("/")[2]
         if name in self._drafts:
             return _refusing(method)
-        serialisers = (handler.request_deserializer, handler.response_serializer)
+        serialisers = (_reading(handler.request_deserializer), handler.response_serializer)
         if handler.unary_unary is not None:
             return grpc.unary_unary_rpc_method_handler(self._unary(name, handler.unary_unary), *serialisers)
         if handler.unary_stream is not None:
@@ -95,6 +96,10 @@ class CallGuard(_Interceptor):
         return answer
 
     def _check(self, message: Any, what: str) -> None:
+        if isinstance(message, _Unreadable):
+            raise InvalidRequest.at(
+                Reason.BAD_REQUEST, what, f"is not a message of this call: {message.why}", message.size
+            )
         size = message.ByteSize() if isinstance(message, Message) else 0
         if size > self._limit:
             raise LimitExceeded(
@@ -102,6 +107,26 @@ class CallGuard(_Interceptor):
                 f"the {what} has {size} bytes; at most {self._limit} are allowed",
                 metadata={"limit": str(self._limit), "requested": str(size)},
             )
+
+
+@dataclass(frozen=True)
+class _Unreadable:
+    """What a request is taken for whose bytes cannot be read."""
+
+    why: str
+    size: int
+
+
+def _reading(parse: Callable[[bytes], Any]) -> Callable[[bytes], Any]:
+    """`parse`, but never raising: gRPC would answer its exception with UNKNOWN and no reason."""
+
+    def read(data: bytes) -> Any:
+        try:
+            return parse(data)
+        except DecodeError as error:
+            return _Unreadable(str(error), len(data))
+
+    return read
 
 
 class _Call:

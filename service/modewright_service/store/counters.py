@@ -41,6 +41,7 @@ class Counters:
     solves_retried: int = 0
     solves_running: int = 0
     solves_waiting: int = 0
+    records_damaged: int = 0
     solve_joins: int = 0
     cache_hits: int = 0
     cache_misses: int = 0

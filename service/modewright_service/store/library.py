@@ -10,6 +10,7 @@ from __future__ import annotations
 
 import asyncio
 import copy
+import logging
 import math
 import time
 from collections.abc import Callable
@@ -20,12 +21,14 @@ from typing import TYPE_CHECKING, Any, TypeVar
 from modewright_service.core.errors import CoreError, Interrupted, Reason
 from modewright_service.store.cache import Kept, RecordCache
 from modewright_service.store.counters import Counters
-from modewright_service.store.orders import Order, Progress, Solver, StopFlag
+from modewright_service.store.orders import Order, Progress, Solver, StopFlag, damaged
 
 if TYPE_CHECKING:
     from modewright_service.core.problem import Problem
 
 __all__ = ["Found", "Library", "Wanted"]
+
+_log = logging.getLogger(__name__)
 
 T = TypeVar("T")
 
@@ -127,12 +130,19 @@ class Library:
         return flight
 
     async def _compute(self, order: Order) -> Kept:
-        from modewright.record import Record
+        from modewright.record import Record, RecordError
 
         computed = await self._solver.solve(order)
         # The checksum of a large record takes a while: not on the event loop.
         loop = asyncio.get_running_loop()
-        record = await loop.run_in_executor(self._executor, Record.from_bytes, computed.data)
+        try:
+            record = await loop.run_in_executor(self._executor, Record.from_bytes, computed.data)
+            if record.basis_key != order.basis_key:
+                raise RecordError(f"it is the basis {record.basis_key}, not {order.basis_key}")
+        except RecordError as error:
+            self._counters.records_damaged += 1
+            _log.error("a damaged record was thrown away", exc_info=error)
+            raise damaged() from error
         kept = Kept(record, computed.data, computed.seconds)
         self._cache.put(kept)
         return kept

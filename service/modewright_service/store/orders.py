@@ -7,12 +7,12 @@ import time
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Protocol
 
-from modewright_service.core.errors import Interrupted, Reason
+from modewright_service.core.errors import CoreError, Interrupted, Reason
 
 if TYPE_CHECKING:
     from modewright_service.core.problem import Problem
 
-__all__ = ["Computed", "Order", "Progress", "Solver", "StopFlag"]
+__all__ = ["Computed", "Order", "Progress", "Solver", "StopFlag", "damaged"]
 
 
 @dataclass(eq=False)
@@ -46,11 +46,22 @@ class Progress:
     """How far an order is.
 
     computing: a worker has it. position: orders that wait before it. steps: life signs of the solver so far.
+    starting: it waits because no worker is ready for work yet.
     """
 
     computing: bool
     position: int = 0
     steps: int = 0
+    starting: bool = False
+
+
+def damaged() -> CoreError:
+    """The error for a record that was computed and did not arrive whole; another attempt may do better."""
+    return CoreError(
+        Reason.WORKER_LOST,
+        "the computed basis was damaged on its way and thrown away; the log of the service says more",
+        metadata={"retry_after_seconds": "0.1"},
+    )
 
 
 class StopFlag:
