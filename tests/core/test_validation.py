@@ -110,10 +110,10 @@ FAULTS: list[tuple[Problem, str, str, str]] = [
     (two_layers(interfaces=(Interface(0.4, mass=-1.0),)), "BAD_INTERFACE", "interfaces[0].mass", "-1.0"),
     (two_layers(interfaces=(Interface(0.4, spring=NAN),)), "NOT_FINITE", "interfaces[0].spring", "nan"),
     (
-        two_layers(coupling=Coupling(CouplingKind.BLOCH, 1.0)),
-        "UNSUPPORTED_COUPLING",
-        "coupling.kind",
-        "bloch",
+        two_layers(coupling=Coupling(CouplingKind.BLOCH, 2e6)),
+        "BAD_END_CONDITION",
+        "coupling.phase",
+        "2000000.0",
     ),
 ]
 

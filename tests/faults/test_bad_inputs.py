@@ -204,9 +204,9 @@ PROBLEMS: dict[str, tuple[Document, Bad]] = {
         _document(left={"kind": "bounded"}),
         Bad(InvalidProblem, "BAD_END_CONDITION", "left.kind", "bounded"),
     ),
-    "coupled ends": (
-        {"layers": GOOD["layers"], "coupling": {"kind": "periodic"}},
-        Bad(Unsupported, "UNSUPPORTED_COUPLING", "coupling.kind", "periodic"),
+    "ends coupled with a phase": (
+        {"layers": GOOD["layers"], "coupling": {"kind": "bloch", "phase": 0.5}},
+        Bad(Unsupported, "UNSUPPORTED_COUPLING", "coupling.phase", "0.5"),
     ),
     "an interface outside the domain": (
         _document(interfaces=[{"x": 1.3, "resistance": 1.0}]),

@@ -19,7 +19,7 @@ import numpy as np
 import pytest
 
 import modewright
-from tests.reference.coverage import AHEAD, COVERED, UNCOVERED, highest_low_index, record_of
+from tests.reference.coverage import AHEAD, COUPLED, COVERED, UNCOVERED, highest_low_index, record_of
 from tests.reference.functions import dense_from_record
 from tests.reference.load import problem_from_record, records
 
@@ -66,10 +66,10 @@ def _compare(basis: modewright.Basis, name: str, low: int, high: int) -> dict[st
 
 
 def test_every_record_is_either_covered_or_named_as_uncovered() -> None:
-    assert sorted((*COVERED, *AHEAD, *UNCOVERED)) == sorted(record["name"] for record in records())
+    assert sorted((*COVERED, *AHEAD, *COUPLED, *UNCOVERED)) == sorted(record["name"] for record in records())
 
 
-@pytest.mark.parametrize("name", [*COVERED, *AHEAD])
+@pytest.mark.parametrize("name", [*COVERED, *AHEAD, *COUPLED])
 def test_default_tolerance(name: str, solved: Solved) -> None:
     top = highest_low_index(name)
     basis = solved(name, modes=top + 1)
@@ -82,7 +82,7 @@ def test_default_tolerance(name: str, solved: Solved) -> None:
     assert found["width"] <= 1e-9
 
 
-@pytest.mark.parametrize("name", [*COVERED, *AHEAD])
+@pytest.mark.parametrize("name", [*COVERED, *AHEAD, *COUPLED])
 def test_tight_tolerance(name: str, solved: Solved) -> None:
     top = highest_low_index(name)
     found = _compare(solved(name, modes=top + 1, rtol=TIGHT_RTOL), name, 0, top)

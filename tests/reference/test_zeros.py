@@ -15,7 +15,7 @@ import numpy as np
 import pytest
 
 import modewright
-from tests.reference.coverage import AHEAD, COVERED, highest_low_index
+from tests.reference.coverage import AHEAD, COUPLED, COVERED, highest_low_index
 from tests.reference.own_checks import count_zeros
 
 
@@ -38,3 +38,14 @@ def test_zeros_of_what_can_be_told_apart(name: str, solved: Callable[..., modewr
     expected = np.flatnonzero(alone)
     np.testing.assert_array_equal(basis.zeros[alone], expected)
     np.testing.assert_array_equal(count_zeros(basis.record())[alone], expected)
+
+
+@pytest.mark.parametrize("name", COUPLED)
+def test_zeros_of_coupled_ends(name: str, solved: Callable[..., modewright.Basis]) -> None:
+    """On a ring zeros come in pairs: 0, 2, 2, 4, 4, ... of a <= x < b with periodic ends, 1, 1, 3, 3, ...
+    with antiperiodic ones (Magnus and Winkler, Hill's Equation, 1966, theorem 2.1).
+    """
+    modes = highest_low_index(name) + 1
+    index = np.arange(modes)
+    expected = 2 * (index // 2) + 1 if name.startswith("anti") else 2 * ((index + 1) // 2)
+    np.testing.assert_array_equal(solved(name, modes=modes).zeros, expected)

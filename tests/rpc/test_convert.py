@@ -189,16 +189,19 @@ def test_all_faults_are_found_at_once_and_the_certain_ones_count() -> None:
     assert caught.value.reason is Reason.BAD_END_CONDITION
 
 
-def test_a_coupling_reaches_the_core_which_refuses_it_by_name() -> None:
+def test_a_coupling_reaches_the_core_unless_its_modes_are_complex() -> None:
     message = problem_pb2.Problem(
         layers=unit_problem().layers,
-        coupling=problem_pb2.Coupling(kind=problem_pb2.COUPLING_KIND_BLOCH, phase=0.5),
+        coupling=problem_pb2.Coupling(kind=problem_pb2.COUPLING_KIND_ANTIPERIODIC),
     )
     problem = problem_from(message)
-    assert problem.coupling == core.Coupling(core.CouplingKind.BLOCH, 0.5)
+    assert problem.coupling == core.Coupling(core.CouplingKind.ANTIPERIODIC)
+    assert ends_message(problem, ("regular", "regular")).left.kind == problem_pb2.END_KIND_COUPLED
+    message.coupling.kind, message.coupling.phase = problem_pb2.COUPLING_KIND_BLOCH, 0.5
     with pytest.raises(Unsupported) as caught:
-        core.validate(problem)
+        problem_from(message)
     assert caught.value.reason is Reason.UNSUPPORTED_COUPLING
+    assert caught.value.violations[0].field == "coupling.phase"
 
 
 def test_specifications_resolve_to_rungs() -> None:

@@ -32,6 +32,7 @@ class EndKind(int, metaclass=_enum_type_wrapper.EnumTypeWrapper):
     END_KIND_FILM: _ClassVar[EndKind]
     END_KIND_LUMP: _ClassVar[EndKind]
     END_KIND_BOUNDED: _ClassVar[EndKind]
+    END_KIND_COUPLED: _ClassVar[EndKind]
 
 class CouplingKind(int, metaclass=_enum_type_wrapper.EnumTypeWrapper):
     __slots__ = ()
@@ -56,6 +57,7 @@ END_KIND_ROBIN: EndKind
 END_KIND_FILM: EndKind
 END_KIND_LUMP: EndKind
 END_KIND_BOUNDED: EndKind
+END_KIND_COUPLED: EndKind
 COUPLING_KIND_UNSPECIFIED: CouplingKind
 COUPLING_KIND_PERIODIC: CouplingKind
 COUPLING_KIND_ANTIPERIODIC: CouplingKind

@@ -11,6 +11,8 @@ faults of a problem at once, with their field paths.
 
 from __future__ import annotations
 
+import cmath
+import math
 from dataclasses import dataclass, field
 from enum import StrEnum
 
@@ -164,6 +166,17 @@ class Coupling:
 
     kind: CouplingKind
     phase: float = 0.0
+
+    @property
+    def factor(self) -> complex:
+        """u(b) / u(a), of modulus 1; real for multiples of pi, up to the rounding of pi itself."""
+        if self.kind is not CouplingKind.BLOCH:
+            return complex(1.0 if self.kind is CouplingKind.PERIODIC else -1.0)
+        if not math.isfinite(self.phase):
+            return 1.0 + 0.0j
+        value = cmath.exp(1j * self.phase)
+        near = abs(value.imag) < 1e-15 * max(1.0, abs(self.phase))
+        return complex(round(value.real)) if near else value
 
 
 @dataclass(frozen=True)

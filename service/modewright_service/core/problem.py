@@ -6,7 +6,6 @@ under one name.
 
 from __future__ import annotations
 
-import cmath
 from dataclasses import dataclass
 
 import numpy as np
@@ -123,20 +122,6 @@ def _end_term(end: End, side: str, factor: float) -> EndTerm:
             return EndTerm(kind="bounded")
 
 
-def _factor(coupling: Coupling | None) -> complex | None:
-    match coupling:
-        case None:
-            return None
-        case Coupling(CouplingKind.PERIODIC):
-            return 1.0 + 0.0j
-        case Coupling(CouplingKind.ANTIPERIODIC):
-            return -1.0 + 0.0j
-        case Coupling(_, phase):
-            value = cmath.exp(1j * phase)
-            # multiples of pi are real up to the rounding of pi itself
-            return complex(round(value.real)) if abs(value.imag) < 1e-15 * max(1.0, abs(phase)) else value
-
-
 def resolve(problem: Problem) -> Resolved:
     """Ends and joints of a validated problem with the factor r^g of their places applied.
 
@@ -145,8 +130,9 @@ def resolve(problem: Problem) -> Resolved:
     """
     edges = layer_edges(problem)
     power = problem.geometry.power
-    factor = _factor(problem.coupling)
+    factor = None
     if problem.coupling is not None:
+        factor = problem.coupling.factor
         left = right = EndTerm(kind=str(problem.coupling.kind))
     else:
         left = _end_term(problem.left, "left", abs(edges[0]) ** power)

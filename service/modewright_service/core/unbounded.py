@@ -64,8 +64,12 @@ def _alone(whole: Comparison, first: int, last: int) -> Comparison:
         right = EndTerm(dirichlet=True)
     part = slice(first, last)
     names = ("length", "p", "q", "w_lower", "w_upper", "resistance", "spring", "mass")
-    cut = (getattr(whole, name)[part].copy() for name in names)
-    return Comparison(*cut, left=left, right=right, means=whole.means.part(part))
+    length, p, q, w_lower, w_upper, resistance, spring, mass = (
+        getattr(whole, name)[part].copy() for name in names
+    )
+    return Comparison(
+        *(length, p, q, w_lower, w_upper, resistance, spring, mass), left, right, whole.means.part(part)
+    )
 
 
 def _negative(run: Comparison) -> bool:

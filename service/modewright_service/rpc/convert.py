@@ -61,6 +61,9 @@ _END_NAMES: Final = {
     "film": problem_pb2.END_KIND_FILM,
     "lump": problem_pb2.END_KIND_LUMP,
     "bounded": problem_pb2.END_KIND_BOUNDED,
+    "periodic": problem_pb2.END_KIND_COUPLED,
+    "antiperiodic": problem_pb2.END_KIND_COUPLED,
+    "bloch": problem_pb2.END_KIND_COUPLED,
 }
 _END_CLASSES: Final = {
     "regular": basis_pb2.END_CLASS_REGULAR,
@@ -91,7 +94,7 @@ class _Faults:
     def raise_any(self) -> None:
         if not self.found:
             return
-        kinds = (Reason.UNSUPPORTED_OPTION, Reason.UNSUPPORTED_END)
+        kinds = (Reason.UNSUPPORTED_OPTION, Reason.UNSUPPORTED_END, Reason.UNSUPPORTED_COUPLING)
         certain = [violation for violation in self.found if violation.reason not in kinds]
         # A fault that no version could accept tells more than one that a later version will.
         kind = InvalidProblem if certain else Unsupported
@@ -200,7 +203,11 @@ def _coupling(message: problem_pb2.Coupling, faults: _Faults) -> core.Coupling |
     if kind is None:
         faults.add(Reason.UNKNOWN_OPTION, "coupling.kind", "not a known coupling", int(message.kind))
         return None
-    return core.Coupling(kind, message.phase)
+    coupling = core.Coupling(kind, message.phase)
+    if coupling.factor.imag != 0.0:
+        text = "complex modes are not answered by this version: the phase must be a multiple of pi"
+        faults.add(Reason.UNSUPPORTED_COUPLING, "coupling.phase", text, message.phase)
+    return coupling
 
 
 # ---- what is wanted of a basis ----
