@@ -107,8 +107,13 @@ def test_an_interrupt_cancels_the_call(script: Script, service: modewright.Servi
         script.cancelled.wait(30)
 
     script.steps = [interrupt]
-    with pytest.raises(KeyboardInterrupt):
-        service.solve(PROBLEM, modes=3)
+    # started with interrupts ignored, as in the background of a shell, Python ignores them too
+    before = signal.signal(signal.SIGINT, signal.default_int_handler)
+    try:
+        with pytest.raises(KeyboardInterrupt):
+            service.solve(PROBLEM, modes=3)
+    finally:
+        signal.signal(signal.SIGINT, before)
     assert script.cancelled.wait(30)
     assert service.solve(PROBLEM, modes=3).count == 3
 

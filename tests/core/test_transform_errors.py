@@ -4,6 +4,7 @@ from collections.abc import Callable
 
 import numpy as np
 import pytest
+from numpy.typing import NDArray
 
 from modewright_service.core.errors import CoreError, InvalidRequest, LimitExceeded, NotConverged, Reason
 from modewright_service.core.transforms import (
@@ -227,3 +228,25 @@ def test_meshes_have_digests_of_their_meaning() -> None:
 def test_the_domain_of_another_problem_is_named() -> None:
     with pytest.raises(InvalidRequest, match=r"x\[0\]: outside the domain \[1.0, 2.718281828459045\]"):
         plan_projection(logarithmic_sines(), PointMesh(X))
+
+
+@pytest.mark.parametrize(
+    ("x", "expected"),
+    [
+        (np.linspace(0.0, 0.5, 21), ("x[20]", "0.5")),
+        (np.append(np.linspace(0.0, 0.5, 21)[:-1], 0.51), ("x[20]", "0.51")),
+        (np.linspace(0.5, 1.0, 21), ("x[0]", "0.5")),
+    ],
+)
+def test_points_that_reach_an_interface_only(x: NDArray[np.float64], expected: tuple[str, str]) -> None:
+    """One point in a layer stands for a layer of one cell, not for one that the mesh never entered."""
+    call = lambda: plan_projection(contact(), PointMesh(x))  # noqa: E731
+    assert violation(call, InvalidRequest, Reason.BAD_MESH) == expected
+
+
+def test_a_layer_of_one_cell_has_one_point() -> None:
+    x = np.concatenate([np.linspace(0.0, 0.5, 3, endpoint=False) + 0.5 / 6, [0.75]])
+    constant = plan_projection(contact(), PointMesh(x)).apply(np.full(4, 3.0))
+    assert constant.norm2 == pytest.approx(
+        9.0 * plan_projection(contact(), PointMesh(x)).apply(np.ones(4)).norm2
+    )

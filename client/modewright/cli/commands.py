@@ -213,11 +213,19 @@ def reconstruct(options: argparse.Namespace) -> dict[str, Any]:
                 f" {basis.problem_digest[:16]}...",
             )
         if given.basis_key and given.basis_key != basis.key:
+            if not given.problem_digest:
+                raise InputFileError(
+                    options.coefficients,
+                    f"belongs to basis {given.basis_key[:16]}..., this is {basis.key[:16]}..., and without a"
+                    " problem_digest nothing says that they are of one problem",
+                )
             _log.warning(
                 "the coefficients were made with basis %s, this is %s of the same problem",
                 given.basis_key,
                 basis.key,
             )
+        elif not given.basis_key and not given.problem_digest:
+            _log.info("the file does not say which problem its coefficients belong to")
         fields = np.asarray(
             basis.reconstruct(given.values, x=points, quantity=options.quantity, side=options.side)
         )

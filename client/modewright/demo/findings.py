@@ -44,6 +44,7 @@ class Findings:
     zeros: npt.NDArray[np.int64]
     confirmed: npt.NDArray[np.bool_]
     key: str
+    digest: str
     solve_seconds: float
     coefficients: Floats
     captured: Floats
@@ -125,6 +126,7 @@ def examine(basis: modewright.Basis, pipe: BuriedPipe, cooling: Cooling) -> Find
         zeros=basis.zeros,
         confirmed=basis.confirmed,
         key=basis.key,
+        digest=basis.problem_digest,
         solve_seconds=basis.solve_seconds,
         coefficients=coefficients,
         captured=np.asarray(projection.captured),

@@ -128,6 +128,7 @@ def write_results(
         norm=findings.norm,
         eigenvalues=findings.eigenvalues,
         basis_key=np.array(findings.key),
+        problem_digest=np.array(findings.digest),
         times=cooling.times,
     )
     for name, (header, rows) in (

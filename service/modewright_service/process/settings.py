@@ -44,7 +44,7 @@ def _default_spool() -> Path:
 class Settings:
     """Everything about a service process that can be set; times in seconds, sizes in bytes."""
 
-    listen: str = _setting("127.0.0.1:50051", "address to serve on: host:port, or unix:/path", form="ADDRESS")
+    listen: str = _setting("127.0.0.1:50151", "address to serve on: host:port, or unix:/path", form="ADDRESS")
     workers: int = _setting(0, "processes that solve; 0: one less than there are processors, at least one", 0)
     worker_nice: int = _setting(10, "niceness of the workers", 0)
     spool: Path = field(

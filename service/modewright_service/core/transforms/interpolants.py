@@ -183,12 +183,15 @@ def _check_reach(x: Floats, first: int, last: int, start: float, stop: float, na
     where = f"the layer {name!r} from {start!r} to {stop!r}"
     if last < first:
         raise InvalidRequest.at(Reason.BAD_MESH, "x", f"no point in {where}", f"{x.size} points")
-    if last == first:
+    if x.size == 1:
         return
-    for index, gap, spacing in (
-        (first, x[first] - start, x[first + 1] - x[first]),
-        (last, stop - x[last], x[last] - x[last - 1]),
-    ):
+    if last == first:
+        # a layer of one cell: its neighbours' distances, or the only one there is, say how wide that may be
+        before = x[first] - x[first - 1] if first > 0 else x[first + 1] - x[first]
+        after = x[last + 1] - x[last] if last + 1 < x.size else x[last] - x[last - 1]
+    else:
+        before, after = x[first + 1] - x[first], x[last] - x[last - 1]
+    for index, gap, spacing in ((first, x[first] - start, before), (last, stop - x[last], after)):
         if gap > _REACH * spacing:
             message = f"further from the end of {where} than one spacing of the mesh, {float(spacing)!r}"
             raise InvalidRequest.at(Reason.BAD_MESH, f"x[{index}]", message, x[index], gap=gap)
