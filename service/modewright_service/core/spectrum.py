@@ -70,7 +70,7 @@ def floor_below(system: System, scale: float) -> float:
             return trial
         trial *= 2.0
     raise NotConverged.at(
-        Reason.NOT_CONVERGED, "modes", "no lower end of the spectrum was found", repr(trial)
+        Reason.NOT_CONVERGED, "modes", "no lower end of the spectrum was found", repr(float(trial))
     )
 
 
@@ -138,7 +138,7 @@ def eigenvalues(
     if active.any():
         n = int(np.flatnonzero(active)[0])
         raise NotConverged.at(
-            Reason.NOT_CONVERGED, "modes", f"bracket of index {n} did not close", repr(value[n])
+            Reason.NOT_CONVERGED, "modes", f"bracket of index {n} did not close", repr(float(value[n]))
         )
     value, counted = _confirmed(system, index, value, low, high, scale, poll)
     return Spectrum(np.maximum.accumulate(value), evaluations + counted)

@@ -7,7 +7,6 @@ structure are collected; the core's own checks of the numbers follow.
 
 from __future__ import annotations
 
-import math
 from typing import Final
 
 import numpy as np
@@ -361,8 +360,3 @@ def _remarks(record: Record) -> list[str]:
             "that a group's modes span is determined"
         )
     return remarks
-
-
-def finite_or_zero(value: float) -> float:
-    """`value`, or 0 where it is not finite."""
-    return value if math.isfinite(value) else 0.0
