@@ -293,6 +293,7 @@ def test_unreachable_service_has_its_own_code(document: Path, capsys: pytest.Cap
         ["solve", "a.toml", "--modes", "0"],
         ["solve", "a.toml", "--modes", "3", "-o", "basis.txt"],
         ["solve", "a.toml", "--modes", "3", "--rtol", "inf"],
+        ["solve", "a.toml", "--modes", "3", "--points", "1000000000", "-o", "basis.npz"],
         ["project", "a.toml", "--modes", "3", "-o", "c.npz"],
         ["reconstruct", "a.toml", "--coefficients", "c.npz", "--points", "3", "--at", "x.csv", "-o", "u.npz"],
         ["melt"],

@@ -22,6 +22,10 @@ exit codes: 0 done; 2 wrong command line; 3 document, file or number refused; 4 
 """
 
 
+# Every mode or field has a number at every point: a hundred of them at so many are 800 MB.
+_MOST_POINTS = 1_000_000
+
+
 def _count(text: str) -> int:
     try:
         value = int(text)
@@ -29,6 +33,13 @@ def _count(text: str) -> int:
         raise argparse.ArgumentTypeError(f"{text!r} is not a whole number") from None
     if value < 1:
         raise argparse.ArgumentTypeError(f"{text!r} is not positive")
+    return value
+
+
+def _points(text: str) -> int:
+    value = _count(text)
+    if value > _MOST_POINTS:
+        raise argparse.ArgumentTypeError(f"{text!r} is more than {_MOST_POINTS} points")
     return value
 
 
@@ -124,7 +135,7 @@ def build_parser() -> argparse.ArgumentParser:
     solve = command("solve", "solve for the lowest modes: eigenvalues, bounds, counted zeros")
     _common(solve, "number of modes, the lowest ones")
     _write(solve, "eigenvalues, bounds and zeros", required=False)
-    solve.add_argument("--points", type=_count, metavar="M", help="add the modes on M equal steps (NPZ only)")
+    solve.add_argument("--points", type=_points, metavar="M", help="add the modes on M equal steps (NPZ only)")
     solve.add_argument(
         "--save-basis", type=Path, metavar="PATH", help="keep the whole basis as a record file"
     )
@@ -174,7 +185,7 @@ def build_parser() -> argparse.ArgumentParser:
     )
     place = reconstruct.add_mutually_exclusive_group(required=True)
     place.add_argument(
-        "--points", type=_count, metavar="M", help="M equally spaced points, both ends included"
+        "--points", type=_points, metavar="M", help="M equally spaced points, both ends included"
     )
     place.add_argument(
         "--at", type=Path, metavar="FILE", help="NPZ (array x) or CSV (first column) of the points"
