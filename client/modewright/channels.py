@@ -2,7 +2,9 @@
 
 A channel is kept under (process id, target) and shared by the handles that lease it. A forked child makes
 its own and leaves the parent's untouched - it is not even dropped there, because closing it would reach
-into threads that the child does not have.
+into threads that the child does not have. Fork while no other thread is within a call: gRPC skips its own
+preparations for a fork otherwise, and a call in the child may then wait for ever; start processes by spawn
+or forkserver where threads are calling.
 
 Limits: answers up to 8 MiB. gRPC's own retries are off: they end silently above a buffer of 256 KiB and
 after a stream's first message; :mod:`modewright.retry` does it instead. Keepalive pings stay off, as

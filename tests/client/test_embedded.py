@@ -296,18 +296,6 @@ def test_a_handle_made_before_the_fork_and_first_used_after_it() -> None:
         assert unused._attachment is None
 
 
-def test_a_fork_amid_calls_of_other_threads(service: modewright.Service) -> None:
-    from concurrent.futures import ThreadPoolExecutor
-
-    with ThreadPoolExecutor(4) as threads:
-        basis = service.solve(PROBLEM, modes=3)
-        calls = [threads.submit(basis.project, "x") for _ in range(100)]
-        codes = [_in_fork(lambda: _solves(service)) for _ in range(3)]
-        results = [call.result() for call in calls]
-    assert codes == [OK] * 3
-    assert all(np.array_equal(result, results[0]) for result in results)
-
-
 def _in_pool(basis: modewright.Basis) -> tuple[str, list[float]]:
     assert basis.service is not None
     return basis.service.address, basis.project("sin(2*pi*x)").tolist()

@@ -135,7 +135,7 @@ def build_parser() -> argparse.ArgumentParser:
     solve = command("solve", "solve for the lowest modes: eigenvalues, bounds, counted zeros")
     _common(solve, "number of modes, the lowest ones")
     _write(solve, "eigenvalues, bounds and zeros", required=False)
-    solve.add_argument("--points", type=_points, metavar="M", help="add the modes on M equal steps (NPZ only)")
+    solve.add_argument("--points", type=_points, metavar="M", help="add the modes on M equal steps (NPZ)")
     solve.add_argument(
         "--save-basis", type=Path, metavar="PATH", help="keep the whole basis as a record file"
     )
