@@ -19,7 +19,16 @@ import numpy as np
 import pytest
 
 import modewright
-from tests.reference.coverage import AHEAD, COUPLED, COVERED, UNCOVERED, highest_low_index, record_of
+from tests.reference.coverage import (
+    AHEAD,
+    COUPLED,
+    COVERED,
+    REGULAR,
+    SINGULAR,
+    UNCOVERED,
+    highest_low_index,
+    record_of,
+)
 from tests.reference.functions import dense_from_document
 from tests.reference.load import document_from_record, problem_from_record, records
 
@@ -28,11 +37,17 @@ TIGHT_RTOL = 1e-12
 HIGH = tuple(
     name for name in COVERED if any(entry["index"] > 100 for entry in record_of(name).get("also", []))
 )
-# A thousand modes take seconds: of the singular ends two stand for all in the quick tier.
-SLOW = (
-    *("bessel1-neumann", "bessel-half-dirichlet", "cylinder-biot-1", "sphere-biot-5"),
-    *("p-sqrt-x-dirichlet", "w-inverse-sqrt"),
+# A thousand modes take seconds: these stand for all in the quick tier, the rest is long.
+QUICK_HIGH = (
+    "dirichlet-unit",
+    "plate-biot-1",
+    "exp-graded-rod",
+    "w-x-squared",
+    "graetz-tube",
+    "periodic-unit",
 )
+# Of singular and coupled ends at the tight tolerance likewise.
+QUICK_TIGHT = ("bessel-half-dirichlet", "legendre", "p-x-three-halves", "lattice-band-edges")
 
 Solved = Callable[..., modewright.Basis]
 
@@ -84,7 +99,16 @@ def test_default_tolerance(name: str, solved: Solved) -> None:
     assert found["width"] <= 1e-9
 
 
-@pytest.mark.parametrize("name", [*COVERED, *AHEAD, *COUPLED])
+@pytest.mark.parametrize(
+    "name",
+    [
+        *(*REGULAR, *AHEAD),
+        *(
+            name if name in QUICK_TIGHT else pytest.param(name, marks=pytest.mark.long)
+            for name in (*SINGULAR, *COUPLED)
+        ),
+    ],
+)
 def test_tight_tolerance(name: str, solved: Solved) -> None:
     top = highest_low_index(name)
     found = _compare(solved(name, modes=top + 1, rtol=TIGHT_RTOL), name, 0, top)
@@ -102,7 +126,7 @@ def _check_high_indices(name: str, rtol: float, solved: Solved) -> None:
 
 @pytest.mark.parametrize(
     "name",
-    [pytest.param(name, marks=pytest.mark.long) if name in SLOW else name for name in HIGH],
+    [name if name in QUICK_HIGH else pytest.param(name, marks=pytest.mark.long) for name in HIGH],
 )
 def test_high_indices(name: str, solved: Solved) -> None:
     _check_high_indices(name, DEFAULT_RTOL, solved)
