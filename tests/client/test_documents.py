@@ -357,6 +357,7 @@ def test_an_unusable_table_says_why(tmp_path: Path, content: str, columns: Any, 
     [
         ("p.ini", "", "must end in .json"),
         ("p.json", "{", "not readable as JSON"),
+        ("p.json", '{"layers": [{"start": 0, "end": 1, "end": 2}]}', "the key 'end' occurs twice"),
         ("p.toml", "a = ", "not readable as TOML"),
         ("p.json", "[1]", "table of named fields"),
         ("p.json", "[" * 100_000, "not readable as JSON"),

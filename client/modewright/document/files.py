@@ -54,7 +54,7 @@ def read_document(path: Path) -> Mapping[str, Any]:
 
 def _parse(suffix: str, text: str, path: Path) -> Any:
     if suffix == ".json":
-        return json.loads(text)
+        return json.loads(text, object_pairs_hook=_unique)
     if suffix == ".toml":
         return tomllib.loads(text)
     try:
@@ -66,6 +66,16 @@ def _parse(suffix: str, text: str, path: Path) -> Any:
         return yaml.safe_load(text)
     except yaml.YAMLError as error:
         raise ValueError(str(error)) from error
+
+
+def _unique(pairs: list[tuple[str, Any]]) -> dict[str, Any]:
+    """The object of a JSON text; of two members with one name, neither can be taken for the one meant."""
+    found: dict[str, Any] = {}
+    for key, value in pairs:
+        if key in found:
+            raise ValueError(f"the key {quote(key)} occurs twice in one object")
+        found[key] = value
+    return found
 
 
 def _refused(path: Path, message: str, number: str = "", *, reason: str = "BAD_REQUEST") -> InvalidProblem:
