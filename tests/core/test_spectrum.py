@@ -15,6 +15,7 @@ from scipy.optimize import brentq
 from modewright.pieces import Pieces
 from modewright_service.core.approximation import approximate
 from modewright_service.core.comparison import build_comparison
+from modewright_service.core.errors import Unsupported
 from modewright_service.core.problem import Dirichlet, Film, Interface, Lump, Neumann, Problem, Robin, resolve
 from modewright_service.core.solve import SolveOptions, solve
 
@@ -189,3 +190,11 @@ def test_equal_problems_give_equal_bytes() -> None:
     first = solve(PROBLEMS["two wells"], 24, 1e-9)
     second = solve(PROBLEMS["two wells"], 24, 1e-9)
     assert first.to_bytes() == second.to_bytes()
+
+
+def test_mass_in_lumps_alone_is_named() -> None:
+    """Two masses on a weightless rod have two eigenvalues: the refusal says what is missing, no number."""
+    with pytest.raises(Unsupported, match="w is zero in every layer") as caught:
+        solve(layered([0, 1], [1], [0], left=Lump(2.0), right=Lump(1.0)), 2, 1e-9)
+    (violation,) = caught.value.violations
+    assert (violation.field, violation.number) == ("layers", "")

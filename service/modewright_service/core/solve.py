@@ -34,6 +34,7 @@ from modewright_service.core.errors import (
     NotConverged,
     Reason,
     SpectrumExhausted,
+    Unsupported,
 )
 from modewright_service.core.mesh import (
     bisect_elements,
@@ -132,11 +133,10 @@ def solve(
     plans = plan_ends(problem)
     coefficients = approximate(problem, ends=(plans[0].map, plans[1].map), poll=poll)
     if not coefficients.w.any():
-        raise SpectrumExhausted.at(
-            Reason.SPECTRUM_EXHAUSTED,
-            "modes",
-            "w is zero in every layer: only lumped masses carry lambda",
-            _asked(wish),
+        raise Unsupported.at(
+            Reason.UNSUPPORTED_COEFFICIENT,
+            "layers",
+            "w is zero in every layer: only lumped masses carry lambda, which this version does not solve",
         )
     _check_resolved(coefficients, rtol)
     scale = fundamental(coefficients)
