@@ -130,7 +130,7 @@ def test_flags_win_over_the_environment_and_that_over_defaults() -> None:
         (["--log-level", "loud"], {}, ["log_level", "loud"]),
         (["--workers", "100000"], {}, ["workers", "100000"]),
         (["--listen", "nowhere"], {}, ["listen", "nowhere"]),
-        ([], {"MODEWRIGHT_LISTEN": "localhost:99999"}, ["listen", "localhost:99999"]),
+        ([], {"MODEWRIGHT_LISTEN": "localhost:99999"}, ["listen", "localhost:99999", "between 0 and 65535"]),
         (["--metrics", "9100"], {}, ["metrics", "9100"]),
     ],
 )

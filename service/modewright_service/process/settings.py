@@ -107,8 +107,10 @@ class Settings:
 
 def _check_address(name: str, address: str) -> None:
     host, _, port = address.rpartition(":")
-    if not host or not port.isdecimal() or int(port) > 65535:
+    if not host or not port.isdecimal():
         raise SettingsError(f"{name}: {address!r} is not host:port")
+    if int(port) > 65535:
+        raise SettingsError(f"{name}: the port of {address!r} is not between 0 and 65535")
 
 
 def add_flags(parser: argparse.ArgumentParser) -> None:
