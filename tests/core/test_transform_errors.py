@@ -1,5 +1,6 @@
 """What a projection or reconstruction refuses, with the field and the number in the error."""
 
+import dataclasses
 from collections.abc import Callable
 
 import numpy as np
@@ -64,6 +65,14 @@ def test_an_interface_given_three_times() -> None:
 def test_a_layer_without_points_is_named() -> None:
     with pytest.raises(InvalidRequest, match=r"'layer 1' from 0\.5 to 1\.0"):
         plan_projection(contact(), PointMesh(np.array([0.0, 0.2, 0.4])))
+
+
+def test_a_layer_without_a_name_is_numbered() -> None:
+    record = dataclasses.replace(contact(), layer_names=("", ""))
+    with pytest.raises(InvalidRequest, match=r"layers\[1\] from 0\.5 to 1\.0"):
+        plan_projection(record, PointMesh(np.linspace(0.0, 0.5, 21)))
+    with pytest.raises(InvalidRequest, match=r"no point in layers\[1\] from 0\.5 to 1\.0"):
+        plan_projection(record, PointMesh(np.array([0.0, 0.2, 0.4])))
 
 
 @pytest.mark.parametrize(

@@ -180,7 +180,7 @@ def _check_doubles(x: Floats, segments: Segments) -> None:
 
 def _check_reach(x: Floats, first: int, last: int, start: float, stop: float, name: str) -> None:
     """A layer needs a point, and its outermost points no further from its ends than from the next ones."""
-    where = f"the layer {name!r} from {start!r} to {stop!r}"
+    where = f"{name} from {start!r} to {stop!r}"
     if last < first:
         raise InvalidRequest.at(Reason.BAD_MESH, "x", f"no point in {where}", f"{x.size} points")
     if x.size == 1:

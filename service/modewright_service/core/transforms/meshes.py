@@ -113,7 +113,7 @@ class CellMesh:
 
 @dataclass(frozen=True, eq=False)
 class Segments:
-    """Where interpolants break: layers, cut at interfaces. `bounds` (C+1,) ascending; a name for each."""
+    """Where interpolants break: layers, cut at interfaces. `bounds` (C+1,) ascending; words for each."""
 
     bounds: NDArray[np.float64]
     names: tuple[str, ...]
@@ -163,8 +163,9 @@ def segments_of(record: Record) -> Segments:
             breaks[index - 1] = True
     first = np.concatenate(([0], np.flatnonzero(breaks) + 1))
     bounds = np.append(edges[first], edges[-1])
+    given = dict(enumerate(record.layer_names))
     names = tuple(
-        record.layer_names[i] if i < len(record.layer_names) else f"layer {i}" for i in layer[first].tolist()
+        f"the layer {given[i]!r}" if given.get(i) else f"layers[{i}]" for i in layer[first].tolist()
     )
     return Segments(bounds, names)
 
