@@ -166,6 +166,8 @@ def _mesh(
             refuse("measure", "belongs to cell averages, which need edges", reason="BAD_REQUEST")
         points = real_vector("x", x)
         _finite("x", points)
+        if points.size < 2:
+            refuse("x", "needs at least two entries", points.size, reason="BAD_MESH")
         message = pb.PointMesh(x=to_message(points))
         if interpolation is not None:
             known("interpolation", interpolation, _INTERPOLATIONS)

@@ -192,6 +192,8 @@ def test_a_request_beyond_the_limit_is_refused_before_it_is_sent(
         ({"values": [[1, 2, np.nan, 4, 5]], "x": np.arange(5)}, "values[0, 2]"),
         ({"values": np.ones(5), "x": [0, 1, np.inf, 3, 4]}, "x[2]"),
         ({"values": "exp(-x)", "x": np.arange(5)}, "x"),
+        ({"values": [], "x": []}, "x"),
+        ({"values": np.ones((2, 0)), "x": []}, "x"),
     ],
 )
 def test_arguments_that_do_not_fit_are_named(
@@ -202,6 +204,16 @@ def test_arguments_that_do_not_fit_are_named(
         basis.project(**arguments)
     assert caught.value.violations[0].field == field
     assert len(script.requests) == 1
+
+
+def test_too_few_points_are_counted(script: Script, service: modewright.Service) -> None:
+    basis = service.solve(PROBLEM, modes=3)
+    for points in (0, 1):
+        with pytest.raises(modewright.InvalidRequest) as caught:
+            basis.project(np.ones(points), x=np.ones(points))
+        assert caught.value.reason == "BAD_MESH"
+        assert caught.value.violations[0].field == "x"
+        assert caught.value.violations[0].number == str(points)
 
 
 # ---- calls of moderate size ----
