@@ -310,6 +310,21 @@ def test_modes_on_points_need_an_archive(document: Path, capsys: pytest.CaptureF
     assert "--points needs --output" in capsys.readouterr().err
 
 
+def test_too_many_numbers_are_refused_before_the_service_is_asked(
+    document: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    out = ("--points", "1000000", "-o", str(tmp_path / "out.npz"), "--service", "127.0.0.1:1")
+    assert main(["solve", str(document), "--modes", "11", *out]) == 3
+    message = capsys.readouterr().err
+    assert "--points: 1000000 points for 11 modes are 11000000 numbers, more than 10000000" in message
+    for shape, what in (((11,), "11 modes"), ((12, 3), "12 fields")):
+        np.savez(tmp_path / "c.npz", coefficients=np.ones(shape))
+        given = ("--coefficients", str(tmp_path / "c.npz"))
+        assert main(["reconstruct", str(document), *given, *out]) == 3
+        assert f"--points: 1000000 points for {what} are" in capsys.readouterr().err
+    assert not (tmp_path / "out.npz").exists()
+
+
 def test_help_and_version(capsys: pytest.CaptureFixture[str]) -> None:
     assert main(["--help"]) == 0
     assert "exit codes" in capsys.readouterr().out

@@ -22,7 +22,7 @@ exit codes: 0 done; 2 wrong command line; 3 document, file or number refused; 4 
 """
 
 
-# Every mode or field has a number at every point: a hundred of them at so many are 800 MB.
+# The points themselves; the commands limit points times modes or fields.
 _MOST_POINTS = 1_000_000
 
 

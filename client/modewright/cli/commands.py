@@ -28,6 +28,9 @@ Array = npt.NDArray[Any]
 
 _log = logging.getLogger("modewright.cli")
 
+# With --points, numbers of one array: 80 MB, and several times as much while it is made.
+_MOST_NUMBERS = 10_000_000
+
 
 def _solve(
     service: modewright.Service, options: argparse.Namespace, modes: int, rtol: float | None
@@ -72,6 +75,7 @@ def solve(options: argparse.Namespace) -> dict[str, Any]:
     target = options.output
     if options.points is not None and (target is None or target.suffix.lower() != ".npz"):
         raise modewright.InvalidRequest("--points needs --output with a name in .npz")
+    _check_numbers(options, options.modes, "modes")
     with modewright.connect(options.service, timeout=options.timeout) as service:
         basis = _solve(service, options, options.modes, options.rtol)
         columns = {
@@ -108,6 +112,17 @@ def solve(options: argparse.Namespace) -> dict[str, Any]:
         "solve_seconds": basis.solve_seconds,
         "output": None if target is None else str(target),
     }
+
+
+def _check_numbers(options: argparse.Namespace, count: int, what: str) -> None:
+    """Raises LimitExceeded where so many modes or fields on --points are more than memory is asked for."""
+    if options.points is not None and options.points * count > _MOST_NUMBERS:
+        message = (
+            f"{options.points} points for {count} {what} are {options.points * count} numbers, more than"
+            f" {_MOST_NUMBERS}"
+        )
+        violation = modewright.Violation("--points", message, str(options.points))
+        raise modewright.LimitExceeded(reason="LIMIT_EXCEEDED", violations=[violation])
 
 
 def _evenly(options: argparse.Namespace) -> Array:
@@ -203,6 +218,8 @@ def reconstruct(options: argparse.Namespace) -> dict[str, Any]:
         raise InputFileError(
             options.coefficients, f"holds {count} coefficients a snapshot, --modes says {modes}"
         )
+    _check_numbers(options, modes, "modes")
+    _check_numbers(options, given.values.size // count, "fields")
     points = read_points(options.at) if options.at is not None else _evenly(options)
     with modewright.connect(options.service, timeout=options.timeout) as service:
         basis = _solve(service, options, modes, options.rtol or given.rtol)
