@@ -28,8 +28,8 @@ Array = npt.NDArray[Any]
 
 _log = logging.getLogger("modewright.cli")
 
-# With --points, numbers of one array: 80 MB, and several times as much while it is made.
-_MOST_NUMBERS = 10_000_000
+# With --points, numbers of one array: 800 MB, room for 100,000 fields on 1,000 points.
+_MOST_NUMBERS = 100_000_000
 
 
 def _solve(
