@@ -38,14 +38,7 @@ HIGH = tuple(
     name for name in COVERED if any(entry["index"] > 100 for entry in record_of(name).get("also", []))
 )
 # A thousand modes take seconds: these stand for all in the quick tier, the rest is long.
-QUICK_HIGH = (
-    "dirichlet-unit",
-    "plate-biot-1",
-    "exp-graded-rod",
-    "w-x-squared",
-    "graetz-tube",
-    "periodic-unit",
-)
+QUICK_HIGH = ("dirichlet-unit", "exp-graded-rod", "w-x-squared")
 # Of singular and coupled ends at the tight tolerance likewise.
 QUICK_TIGHT = ("bessel-half-dirichlet", "legendre", "p-x-three-halves", "lattice-band-edges")
 
