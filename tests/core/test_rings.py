@@ -158,8 +158,7 @@ def test_contrast_joints_and_interlacing(seed: int) -> None:
     np.testing.assert_allclose(mirrored.eigenvalues, ring.eigenvalues, rtol=1e-12)
 
 
-@pytest.mark.parametrize("degree", [4, 6, 8])
-@pytest.mark.parametrize("phase", [0.0, 1.0, 2.5])
+@pytest.mark.parametrize(("degree", "phase"), [(4, 0.0), (6, 1.0), (8, 2.5)])
 def test_bounds_of_starved_rings_contain(degree: int, phase: float) -> None:
     rod = Layer("rod", 0.0, 1.0, Expression("2+sin(2*pi*x)"), Expression("30*cos(2*pi*x)"))
     problem = Problem((rod,), coupling=bloch(phase))

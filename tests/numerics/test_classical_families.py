@@ -53,7 +53,7 @@ def test_chebyshev(service: modewright.Service) -> None:
     assert float(np.abs(chebyshev - exact).max()) <= TOLERANCE
 
 
-@pytest.mark.parametrize("order", [1.5, 2.5])
+@pytest.mark.parametrize("order", [1.5, pytest.param(2.5, marks=pytest.mark.long)])
 def test_gegenbauer(order: float, service: modewright.Service) -> None:
     """C_n^(a): (n+1) C_{n+1} = 2 (n+a) x C_n - (n+2a-1) C_{n-1}, weight (1-x^2)^(a-1/2); norms: DLMF 18.3."""
     a = order

@@ -64,7 +64,7 @@ def test_a_comparison_gains_a_second_order() -> None:
 
 
 @pytest.mark.parametrize("rtol", [1e-6, 1e-9, 1e-12])
-@pytest.mark.parametrize("count", [8, 12, 16, 48])
+@pytest.mark.parametrize("count", [8, 48])
 def test_wells_that_agree_to_rounding(count: int, rtol: float) -> None:
     """The record triple-well-beta50 (source beside it): triplets, each of whose members counts."""
     record = record_of("triple-well-beta50")

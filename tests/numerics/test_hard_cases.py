@@ -143,7 +143,7 @@ def test_a_shifted_potential(shift: float, service: modewright.Service) -> None:
     np.testing.assert_array_equal(basis.zeros, np.arange(12))
 
 
-@pytest.mark.parametrize("sign", [1.0, -1.0])
+@pytest.mark.parametrize("sign", [pytest.param(1.0, marks=pytest.mark.long), -1.0])
 def test_a_large_potential_that_varies(sign: float, service: modewright.Service) -> None:
     """An offset of 1e5 under a varying potential and weight, on layers one of which is massless."""
     layers = [

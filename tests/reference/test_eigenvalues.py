@@ -38,7 +38,7 @@ HIGH = tuple(
     name for name in COVERED if any(entry["index"] > 100 for entry in record_of(name).get("also", []))
 )
 # A thousand modes take seconds: these stand for all in the quick tier, the rest is long.
-QUICK_HIGH = ("dirichlet-unit", "exp-graded-rod", "w-x-squared")
+QUICK_HIGH = ("dirichlet-unit", "w-x-squared")
 # Of singular and coupled ends at the tight tolerance likewise.
 QUICK_TIGHT = ("bessel-half-dirichlet", "legendre", "p-x-three-halves", "lattice-band-edges")
 
@@ -125,14 +125,10 @@ def test_high_indices(name: str, solved: Solved) -> None:
     _check_high_indices(name, DEFAULT_RTOL, solved)
 
 
-# A thousand modes take seconds: in the quick tier one problem of constant coefficients and one of
-# others stand for all.
+# A thousand modes take seconds: in the quick tier one problem stands for all.
 @pytest.mark.parametrize(
     "name",
-    [
-        name if name in ("dirichlet-unit", "w-x-squared") else pytest.param(name, marks=pytest.mark.long)
-        for name in HIGH
-    ],
+    [name if name == "w-x-squared" else pytest.param(name, marks=pytest.mark.long) for name in HIGH],
 )
 def test_high_indices_at_the_tight_tolerance(name: str, solved: Solved) -> None:
     _check_high_indices(name, TIGHT_RTOL, solved)
